@@ -1,0 +1,42 @@
+"""Every limit of the wire protocol, by name, with the reason for its number."""
+
+PROTOCOL_VERSIONS = (1,)
+"""Versions that this side speaks, best last."""
+
+HEADER_BYTES = 8
+"""Session (u32) and sequence number (u32), little-endian, before the body."""
+
+CRC_BYTES = 4
+
+MAX_SERIAL_BODY_BYTES = 640
+"""Body of a serial frame. Header + body = 648 bytes stays under 655, the length up to which
+CRC-32C catches every error of up to 5 bits."""
+
+SERIAL_BLOCK_BYTES = 600
+"""Samples carried by one block on a serial line."""
+
+MAX_MESSAGE_BODY_BYTES = 128 * 1024
+"""Body of a frame on a message transport (ZeroMQ, memory)."""
+
+MESSAGE_BLOCK_BYTES = 64 * 1024
+"""Samples carried by one block on a message transport."""
+
+MAX_TEXT_BYTES = 200
+"""Names and reasons: what fits a serial frame with room for the rest of the message."""
+
+MAX_UNIT_BYTES = 24
+MAX_CHANNELS = 32
+"""Inputs, outputs or auxiliary channels a rig may declare, each."""
+
+MAX_SAMPLES = 16_000_000
+"""Samples of one trial: over four hours at 1 kHz, and still under the record's 1 GB a blob."""
+
+MAX_RANGES = 24
+"""Gaps named in one resend request or table state; more are named in the next one."""
+
+MAX_DEPTH = 3
+"""Nesting of a MessagePack body: the message, a list in it, an item of that list."""
+
+MAX_TICK_HZ = 1_000_000_000
+MAX_BACKLOG_FRAMES = 100_000
+"""Frames a link holds for a reader that does not read, before it calls the line broken."""

@@ -1,0 +1,66 @@
+"""Learning laws: one file each behind one contract, listed in LAWS.
+
+To add a law: a settings dataclass with `kind` and `build`, a class with `update`, a row in LAWS.
+"""
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+from typing import Any, Protocol
+
+from trialrunner.core.trial import Array, Memory, Purpose, Trial
+
+
+@dataclass(frozen=True)
+class LawContext:
+    """What a law may know of the run when it is built."""
+
+    period_s: float
+    n_samples: int
+    n_inputs: int
+    n_outputs: int
+    reference: Array
+    """(n_samples, n_outputs)."""
+    low: Array
+    """(n_inputs,): lower box limit, the tighter of configuration and rig."""
+    high: Array
+    """(n_inputs,)."""
+    rate_per_s: Array
+    """(n_inputs,): rate limit; infinity where there is none."""
+
+
+@dataclass(frozen=True)
+class Step:
+    """A law's answer to a trial."""
+
+    feedforward: Array
+    """(n_samples, n_inputs): the raw next feedforward, before filter and limits."""
+    purpose: Purpose = Purpose.LEARN
+    """PROBE when the next trial is an experiment of the law's own."""
+    memory: Memory = field(default_factory=dict)
+    arrays: Mapping[str, Array] = field(default_factory=dict)
+    """Arrays to hand back at the next update; recorded with the trial."""
+
+
+class Law(Protocol):
+    def update(
+        self, trial: Trial, gain: float, memory: Memory, arrays: Mapping[str, Array]
+    ) -> Step:
+        """The raw next feedforward.
+
+        `gain` scales the learning (1 unless a guard reduced it). `memory` and `arrays` are those
+        of the last Step, empty at first. Deterministic; starts from `trial.feedforward`.
+        """
+
+
+class LawSettings(Protocol):
+    kind: str
+
+    def build(self, context: LawContext) -> Law:
+        """Raises SettingError if the settings do not fit the channels or the horizon."""
+
+
+def law_table() -> dict[str, type[Any]]:
+    """Settings class of each law by its `kind`; imported late because laws may be heavy."""
+    from trialrunner.core.laws.pd import PdSettings
+
+    return {"pd": PdSettings}

@@ -1,0 +1,146 @@
+"""The state of a run between two trials: everything that the next decision depends on.
+
+`RunState` holds what is small and goes into JSON; `Carry` holds the arrays. Both are stored with
+every trial, so that a resumed run and a replay continue bit for bit.
+"""
+
+import math
+from collections.abc import Callable, Mapping
+from dataclasses import asdict, dataclass, field, fields, replace
+from typing import Any
+
+import numpy as np
+
+from trialrunner.core.trial import Array, Mask, Memory, Purpose, Verdict
+
+RECENT_NORMS = 64
+"""Norms kept for guards and stop rules; bounded so that weeks of trials cost no memory."""
+
+
+@dataclass(frozen=True)
+class RunState:
+    trial: int = 0
+    """Index of the next trial."""
+    purpose: Purpose = Purpose.LEARN
+    """Why the next trial is run."""
+    learning: bool = True
+    frozen_by: str = ""
+    """Name of the guard, or "operator", that froze learning."""
+    clean_in_row: int = 0
+    """Trials without complaint since the freeze."""
+    gain: float = 1.0
+    counted: int = 0
+    """Trials that counted, floor trials not included."""
+    updates: int = 0
+    """Feedforwards that the law has made."""
+    averaged: int = 0
+    """Trials already in the running mean error."""
+    voids_in_row: int = 0
+    voids: int = 0
+    roll_backs: int = 0
+    late_updates: int = 0
+    baseline_left: int = 0
+    confirm_left: int = 0
+    confirm_norm: float = math.inf
+    """Error norm that confirmation trials must come back to."""
+    floor_left: int = -1
+    """Floor trials still to run; -1: the floor phase has not begun."""
+    first_norm: float = math.nan
+    best_trial: int = -1
+    best_norm: float = math.inf
+    last_good_trial: int = -1
+    stall: int = 0
+    """Trials since the best error norm last improved."""
+    recent_norms: tuple[float, ...] = ()
+    memories: Mapping[str, Memory] = field(default_factory=dict)
+    """By guard name; "law" is the law's own."""
+    over: str = ""
+    """Why the run is over; empty while it goes on."""
+
+    def to_json(self) -> dict[str, Any]:
+        """JSON-ready; NaN and infinities as strings, because JSON has none."""
+        values = asdict(self)
+        return {key: _plain(value) for key, value in values.items()}
+
+    @classmethod
+    def from_json(cls, values: Mapping[str, Any]) -> "RunState":
+        known = {f.name for f in fields(cls)}
+        read = {key: _read(value) for key, value in values.items() if key in known}
+        read["purpose"] = Purpose(read["purpose"])
+        read["recent_norms"] = tuple(read["recent_norms"])
+        return cls(**read)
+
+
+def _plain(value: Any) -> Any:
+    if isinstance(value, float) and not math.isfinite(value):
+        return f"float:{value}"
+    if isinstance(value, dict):
+        return {key: _plain(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_plain(item) for item in value]
+    return value
+
+
+def _read(value: Any) -> Any:
+    if isinstance(value, str) and value.startswith("float:"):
+        return float(value[6:])
+    if isinstance(value, dict):
+        return {key: _read(item) for key, item in value.items()}
+    if isinstance(value, list):
+        return [_read(item) for item in value]
+    return value
+
+
+@dataclass(frozen=True)
+class Carry:
+    """The arrays between two trials."""
+
+    feedforward: Array
+    """(n_samples, n_inputs): what the next trial plays, exactly as it will be sent."""
+    clipped: Mask
+    """(n_samples, n_inputs): where limits cut the law's wish for it."""
+    learned: Array
+    """(n_samples, n_inputs): the learned feedforward; differs from `feedforward` only in PROBE
+    trials."""
+    mean_error: Array
+    """(n_samples, n_outputs): running mean error over trials with the same feedforward."""
+    law: Mapping[str, Array] = field(default_factory=dict)
+
+    @classmethod
+    def zeros(cls, n_samples: int, n_inputs: int, n_outputs: int) -> "Carry":
+        flat = np.zeros((n_samples, n_inputs))
+        return cls(flat, np.zeros(flat.shape, dtype=bool), flat, np.zeros((n_samples, n_outputs)))
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What one trial led to: stored in one transaction with the trial."""
+
+    verdicts: tuple[Verdict, ...]
+    void: bool
+    norm: float
+    """Scaled error norm; NaN where the trial is incomplete."""
+    action: str
+    """learn, repeat, recall, halt or finish."""
+    sentence: str
+    """What was done and why, for people."""
+    state: RunState
+    carry: Carry
+    late: bool = False
+    """The update missed its deadline and the last feedforward is repeated."""
+
+
+@dataclass(frozen=True)
+class Request:
+    """An operator's request that changes the run state; takes effect between trials."""
+
+    kind: str
+    """freeze, learn or rollback."""
+    target: str = ""
+    """rollback only: best, last_good or a trial index."""
+
+
+Recall = Callable[[int], Array]
+"""The learned feedforward with which a trial was run, by trial index."""
+
+__all__ = ["RECENT_NORMS", "Carry", "Outcome", "Recall", "Request", "RunState", "replace"]

@@ -38,6 +38,7 @@ class RunState:
     voids_in_row: int = 0
     voids: int = 0
     roll_backs: int = 0
+    """By guards, since the start or since an operator last resumed a halted run."""
     late_updates: int = 0
     baseline_left: int = 0
     confirm_left: int = 0
@@ -45,15 +46,32 @@ class RunState:
     """Error norm that confirmation trials must come back to."""
     floor_left: int = -1
     """Floor trials still to run; -1: the floor phase has not begun."""
+    floor_count: int = 0
+    """Floor trials that counted."""
+    floor_norm: float = math.nan
+    """Repeatability floor: error norm of what does not repeat; from the second floor trial on."""
     first_norm: float = math.nan
     best_trial: int = -1
+    """The trial with the smallest error norm. Frozen repeats compete too: it stands for a
+    feedforward, and with several trials of the same one their smallest norm stands for it."""
     best_norm: float = math.inf
     last_good_trial: int = -1
+    """The last trial about which no guard complained."""
+    last_good_norm: float = math.inf
     stall: int = 0
-    """Trials since the best error norm last improved."""
+    """Learning trials since the error norm last improved enough."""
+    stall_norm: float = math.inf
+    """Error norm at that improvement."""
     recent_norms: tuple[float, ...] = ()
+    """Of trials that counted, oldest first, without probe and floor trials."""
+    recent_trials: tuple[int, ...] = ()
+    """Their indices."""
     memories: Mapping[str, Memory] = field(default_factory=dict)
     """By guard name; "law" is the law's own."""
+    ending: str = ""
+    """Why the floor phase runs; becomes `over` with its last trial."""
+    halted: str = ""
+    """Why a guard or the ladder halted the run; only the request "resume" ends that."""
     over: str = ""
     """Why the run is over; empty while it goes on."""
 
@@ -67,11 +85,19 @@ class RunState:
         known = {f.name for f in fields(cls)}
         read = {key: _read(value) for key, value in values.items() if key in known}
         read["purpose"] = Purpose(read["purpose"])
-        read["recent_norms"] = tuple(read["recent_norms"])
+        for key in ("recent_norms", "recent_trials"):
+            read[key] = tuple(read.get(key, ()))
         return cls(**read)
 
 
+_ODD = {"float:nan": math.nan, "float:inf": math.inf, "float:-inf": -math.inf}
+_TEXT = "text:"
+"""Stands before a text that would read as one of the other two."""
+
+
 def _plain(value: Any) -> Any:
+    if isinstance(value, str) and (value in _ODD or value.startswith(_TEXT)):
+        return _TEXT + value
     if isinstance(value, float) and not math.isfinite(value):
         return f"float:{value}"
     if isinstance(value, dict):
@@ -82,8 +108,8 @@ def _plain(value: Any) -> Any:
 
 
 def _read(value: Any) -> Any:
-    if isinstance(value, str) and value.startswith("float:"):
-        return float(value[6:])
+    if isinstance(value, str):
+        return _ODD.get(value, value.removeprefix(_TEXT))
     if isinstance(value, dict):
         return {key: _read(item) for key, item in value.items()}
     if isinstance(value, list):
@@ -105,6 +131,8 @@ class Carry:
     mean_error: Array
     """(n_samples, n_outputs): running mean error over trials with the same feedforward."""
     law: Mapping[str, Array] = field(default_factory=dict)
+    floor: Mapping[str, Array] = field(default_factory=dict)
+    """Streaming mean and spread of the error over the floor trials (see norms); empty before."""
 
     @classmethod
     def zeros(cls, n_samples: int, n_inputs: int, n_outputs: int) -> "Carry":
@@ -135,7 +163,7 @@ class Request:
     """An operator's request that changes the run state; takes effect between trials."""
 
     kind: str
-    """freeze, learn or rollback."""
+    """freeze, learn, rollback, or resume after a guard halted the run."""
     target: str = ""
     """rollback only: best, last_good or a trial index."""
 

@@ -2,16 +2,23 @@
 
 To add a guard: a settings dataclass with defaults and a pure `judge`, and a row in the table.
 Guards of the stage ADMISSION decide whether a trial counts (they may say `void`); guards of the
-stage LEARNING see only trials that count.
+stage LEARNING see only trials that count. What follows a verdict is the ladder's affair.
 """
 
-from dataclasses import dataclass
+from collections.abc import Iterable
+from dataclasses import dataclass, field
 from enum import StrEnum
-from typing import Any, Protocol
+from typing import Any, Literal, Protocol, runtime_checkable
 
-import numpy as np
+from trialrunner.core.errors import SettingError
+from trialrunner.core.settings import InputChannel, OutputChannel
+from trialrunner.core.trial import GuardResult, Level, Mask, Memory, Trial, Verdict
 
-from trialrunner.core.trial import Array, GuardResult, Mask, Memory, Trial
+Action = Literal["warn", "freeze", "roll back", "halt"]
+"""What a guard asks for when it fires; the words of the verdict ladder."""
+
+MAD_TO_SIGMA = 1.4826
+"""Median absolute deviation to standard deviation, for normal noise."""
 
 
 class Stage(StrEnum):
@@ -19,36 +26,30 @@ class Stage(StrEnum):
     LEARNING = "learning"
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, kw_only=True)
 class GuardContext:
-    """What a guard may know of the run beside the trial."""
+    """What a guard may know of the run beside the trial; the state before the trial."""
 
     period_s: float
-    low: Array
-    """(n_inputs,): box limits in force."""
-    high: Array
-    output_low: Array
-    """(n_outputs,): range of each output channel."""
-    output_high: Array
-    start_state: Array
-    """(n_outputs,): where a trial must start."""
-    start_tolerance: Array
-    """(n_outputs,)."""
+    inputs: tuple[InputChannel, ...]
+    outputs: tuple[OutputChannel, ...]
     clipped: Mask
     """(n_samples, n_inputs): true where the daemon's limits cut the law's wish for this trial."""
     error_norm: float
-    """Scaled error norm of this trial (see norms.error_norm); NaN if the trial is incomplete."""
+    """Scaled error norm of this trial (see norms.error_norm); not finite if it is incomplete."""
+    first_norm: float
+    """That of the first trial that counted; NaN at first."""
     best_norm: float
     """Smallest so far among trials that counted; infinity at first."""
     best_trial: int
     """-1 at first."""
     recent_norms: tuple[float, ...]
     """Norms of the last trials that counted, oldest first, without this one."""
+    counted: int
+    """Trials that counted, without this one."""
     learning: bool
-
-    @property
-    def limited_share(self) -> float:
-        return float(np.mean(self.clipped)) if self.clipped.size else 0.0
+    limits_rising: bool
+    """The soft start still holds the feedforward below its full limits."""
 
 
 class GuardSettings(Protocol):
@@ -56,6 +57,49 @@ class GuardSettings(Protocol):
 
     def judge(self, trial: Trial, context: GuardContext, memory: Memory) -> GuardResult:
         """A verdict on this trial and what to remember; pure."""
+
+
+@runtime_checkable
+class ChecksChannels(Protocol):
+    """A guard whose settings name channels."""
+
+    def check_channels(self, outputs: tuple[OutputChannel, ...]) -> None:
+        """Raises SettingError if the settings do not fit the channels."""
+
+
+@dataclass(frozen=True)
+class Report:
+    """Short-hand for a guard's answers."""
+
+    guard: str
+    memory: Memory = field(default_factory=dict)
+
+    def passed(self) -> GuardResult:
+        return GuardResult(Verdict(self.guard, Level.PASS), self.memory)
+
+    def fired(self, action: Action, reason: str, value: float, limit: float) -> GuardResult:
+        verdict = Verdict(self.guard, level_of(action), reason, float(value), float(limit))
+        return GuardResult(verdict, self.memory)
+
+    def void(self, reason: str, value: float, limit: float) -> GuardResult:
+        """Level WARN: what follows a void trial is the ladder's affair."""
+        verdict = Verdict(self.guard, Level.WARN, reason, float(value), float(limit), void=True)
+        return GuardResult(verdict, self.memory)
+
+
+def level_of(action: Action) -> Level:
+    """The rung of a word."""
+    return Level[action.upper().replace(" ", "_")]
+
+
+def require_channels(name: str, used: Iterable[str], outputs: tuple[OutputChannel, ...]) -> None:
+    """Raise SettingError if a setting names an output that the run does not have."""
+    known = [channel.name for channel in outputs]
+    for channel in used:
+        if channel not in known:
+            raise SettingError(
+                f"{name}: expected names of output channels ({', '.join(known)}), found {channel}"
+            )
 
 
 def guard_table() -> dict[str, tuple[Stage, type[Any]]]:

@@ -1,0 +1,100 @@
+"""Error growth: is learning making the error larger?"""
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from statistics import median
+from typing import Any, ClassVar
+
+from trialrunner.core.bounds import STRICT, AboveOne, Count, NonNegative, PositiveCount
+from trialrunner.core.guards import Action, GuardContext, Report
+from trialrunner.core.trial import GuardResult, Memory, Purpose, Trial
+
+LEVEL_TRIALS = 3
+"""Trials in a row whose median counts as a level. The best single trial of a long run is a lucky
+one: with 10 % scatter it lies a quarter below the mean, and a limit drawn from it would fire on a
+healthy rig. The smallest median of three lies much closer to what the rig can hold."""
+
+
+@dataclass(frozen=True, kw_only=True)
+class ErrorGrowth:
+    """Fires when the error norm leaves the level once reached, or keeps rising.
+
+    The level is the smallest median of three trials in a row so far. Judges learning trials only:
+    in all others the feedforward is not the fruit of the last update. A rig whose error norm
+    scatters by more than a tenth from trial to trial needs a larger `ratio`.
+    """
+
+    __pydantic_config__: ClassVar[dict[str, Any]] = STRICT
+    NAME: ClassVar[str] = "error_growth"
+
+    enabled: bool = True
+    ratio: AboveOne = 1.5
+    """Largest error norm as a multiple of the level reached."""
+    trials_above: PositiveCount = 2
+    """Trials in a row above it before the guard fires."""
+    jump_ratio: AboveOne = 4.0
+    """Multiple of the level at which it fires at once."""
+    action: Action = "roll back"
+    growth_trials: PositiveCount = 5
+    """Trials in a row, each with a larger error norm than the one before, that count as growth."""
+    growth_factor: AboveOne = 1.3
+    """Smallest rise over these trials that counts."""
+    growth_action: Action = "freeze"
+    warm_up_trials: Count = 3
+    """Trials that count before the guard speaks."""
+    ignore_below: NonNegative = 0.0
+    """Error norms up to this are never growth."""
+
+    def judge(self, trial: Trial, context: GuardContext, memory: Memory) -> GuardResult:
+        level = _number(memory, "level", math.inf)
+        if trial.purpose is not Purpose.LEARN:
+            return self._report(level, 0).passed()
+        norms = (*context.recent_norms, context.error_norm)
+        factor = context.error_norm / _reference(level, context)
+        above = int(_number(memory, "above", 0)) + 1 if factor > self.ratio else 0
+        level = min(level, _level(norms))
+        if context.counted < self.warm_up_trials or context.error_norm <= self.ignore_below:
+            return self._report(level, 0).passed()
+        if above >= self.trials_above or factor > self.jump_ratio:
+            reached = context.error_norm / factor
+            limit = self.jump_ratio if factor > self.jump_ratio else self.ratio
+            reason = (
+                f"the error norm is {context.error_norm:.4g}, {factor:.3g} times the level "
+                f"{reached:.4g} reached before; the limit is {limit:.4g} times"
+            ) + (f" for {above} trials in a row" if above > 1 else "")
+            return self._report(level, 0).fired(self.action, reason, factor, limit)
+        return self._steady_growth(norms, self._report(level, above))
+
+    def _steady_growth(self, norms: Sequence[float], report: Report) -> GuardResult:
+        run = norms[-1 - self.growth_trials :]
+        rising = all(later > earlier for earlier, later in zip(run, run[1:], strict=False))
+        if len(run) <= self.growth_trials or not rising:
+            return report.passed()
+        factor = run[-1] / run[0] if run[0] > 0 else math.inf
+        if factor < self.growth_factor:
+            return report.passed()
+        reason = (
+            f"the error norm rose {self.growth_trials} trials in a row, from {run[0]:.4g} to "
+            f"{run[-1]:.4g}, {factor:.3g} times; the limit is {self.growth_factor:.4g} times"
+        )
+        return report.fired(self.growth_action, reason, factor, self.growth_factor)
+
+    def _report(self, level: float, above: int) -> Report:
+        return Report(self.NAME, {"level": level, "above": above})
+
+
+def _number(memory: Memory, key: str, default: float) -> float:
+    value = memory.get(key, default)
+    return default if isinstance(value, str | list) else float(value)
+
+
+def _reference(level: float, context: GuardContext) -> float:
+    """What the error norm is compared with: before there is a level, the best trial so far."""
+    reached = level if math.isfinite(level) else context.best_norm
+    # A norm of exactly 0 cannot be grown from by a factor; anything above it is beyond any.
+    return max(reached, 5e-324)
+
+
+def _level(norms: Sequence[float]) -> float:
+    return median(norms[-LEVEL_TRIALS:]) if len(norms) >= LEVEL_TRIALS else math.inf

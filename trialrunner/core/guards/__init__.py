@@ -5,9 +5,11 @@ Guards of the stage ADMISSION decide whether a trial counts (they may say `void`
 stage LEARNING see only trials that count. What follows a verdict is the ladder's affair.
 """
 
-from collections.abc import Iterable
+import math
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 from enum import StrEnum
+from itertools import pairwise
 from typing import Any, Literal, Protocol, runtime_checkable
 
 from trialrunner.core.errors import SettingError
@@ -78,18 +80,29 @@ class Report:
         return GuardResult(Verdict(self.guard, Level.PASS), self.memory)
 
     def fired(self, action: Action, reason: str, value: float, limit: float) -> GuardResult:
-        verdict = Verdict(self.guard, level_of(action), reason, float(value), float(limit))
+        verdict = Verdict(self.guard, level_of(action), reason, _number(value), float(limit))
         return GuardResult(verdict, self.memory)
 
     def void(self, reason: str, value: float, limit: float) -> GuardResult:
         """Level WARN: what follows a void trial is the ladder's affair."""
-        verdict = Verdict(self.guard, Level.WARN, reason, float(value), float(limit), void=True)
+        verdict = Verdict(self.guard, Level.WARN, reason, _number(value), float(limit), void=True)
         return GuardResult(verdict, self.memory)
+
+
+def _number(value: float) -> float:
+    """A measurement that is no number is beyond any limit; the record keeps no NaN."""
+    return math.inf if math.isnan(value) else float(value)
 
 
 def level_of(action: Action) -> Level:
     """The rung of a word."""
     return Level[action.upper().replace(" ", "_")]
+
+
+def rose(values: Sequence[float], times: int) -> bool:
+    """Each of the last `times` values is larger than the one before it."""
+    run = values[-1 - times :]
+    return len(run) > times and all(later > earlier for earlier, later in pairwise(run))
 
 
 def require_channels(name: str, used: Iterable[str], outputs: tuple[OutputChannel, ...]) -> None:

@@ -6,7 +6,7 @@ from typing import Any, ClassVar
 import numpy as np
 
 from trialrunner.core.bounds import STRICT, Fraction, PositiveCount
-from trialrunner.core.guards import Action, GuardContext, Report
+from trialrunner.core.guards import Action, GuardContext, Report, rose
 from trialrunner.core.trial import GuardResult, Memory, Purpose, Trial
 
 
@@ -30,7 +30,7 @@ class Saturation:
     rising_trials: PositiveCount = 5
     """Trials in a row, each with more limited samples than the one before, while the error norm
     did not fall over them."""
-    rising_share: Fraction = 0.01
+    rising_share: Fraction = 0.05
     """Smallest rise of the share over these trials that counts."""
     rising_action: Action = "freeze"
 
@@ -62,10 +62,8 @@ class Saturation:
         return report.passed()
 
     def _keeps_rising(self, shares: list[float], norms: list[float]) -> bool:
-        if len(shares) <= self.rising_trials or norms[-1] < norms[0]:
-            return False
-        rising = all(later > earlier for earlier, later in zip(shares, shares[1:], strict=False))
-        return rising and shares[-1] - shares[0] >= self.rising_share
+        rising = rose(shares, self.rising_trials) and shares[-1] - shares[0] >= self.rising_share
+        return rising and norms[-1] >= norms[0]
 
 
 def _limited_share(trial: Trial, context: GuardContext) -> np.ndarray[Any, Any]:

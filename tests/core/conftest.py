@@ -60,7 +60,6 @@ def make_context() -> Callable[..., GuardContext]:
             "best_norm": math.inf,
             "best_trial": -1,
             "recent_norms": (),
-            "counted": 0,
             "learning": True,
             "limits_rising": False,
         }

@@ -30,7 +30,6 @@ def judge(make_trial: Make, make_context: Make) -> Callable[..., list[Verdict]]:
                 error_norm=float(norm),
                 best_norm=min(seen, default=math.inf),
                 recent_norms=tuple(seen[-RECENT_NORMS:]),
-                counted=k,
             )
             result = guard.judge(make_trial(purpose=purpose), context, memory)
             memory = result.memory

@@ -151,13 +151,23 @@ def unconfirmed(
 ) -> Decision | None:
     """The halt that follows when going back did not bring the old error back; None if it did.
 
-    Then the feedforward is not to blame, and a person has to look at the rig.
+    Then the feedforward is not to blame, and a person has to look at the rig. Old norms no longer
+    hold, so the books begin again with this trial, in case the run is resumed.
     """
     limit = settings.confirm_ratio * state.confirm_norm
     if norm <= limit and verdict.level < Level.ROLL_BACK:
         return None
     after = replace(state, purpose=Purpose.LEARN, confirm_left=0)
     if norm > limit:
+        after = replace(
+            after,
+            best_trial=state.trial,
+            best_norm=norm,
+            last_good_trial=-1,
+            last_good_norm=math.inf,
+            stall=0,
+            stall_norm=norm,
+        )
         reason = (
             f"the roll back is not confirmed: the error norm is {norm:.4g}; the limit is "
             f"{limit:.4g}, {settings.confirm_ratio:.3g} times the {state.confirm_norm:.4g} "

@@ -66,6 +66,8 @@ class RunState:
     """Of trials that counted, oldest first, without probe and floor trials."""
     recent_trials: tuple[int, ...] = ()
     """Their indices."""
+    judged_from: int = 0
+    """Guards see no error norm from before this trial: an operator rolled back or resumed there."""
     memories: Mapping[str, Memory] = field(default_factory=dict)
     """By guard name; "law" is the law's own."""
     ending: str = ""

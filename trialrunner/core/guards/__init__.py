@@ -46,9 +46,8 @@ class GuardContext:
     best_trial: int
     """-1 at first."""
     recent_norms: tuple[float, ...]
-    """Norms of the last trials that counted, oldest first, without this one."""
-    counted: int
-    """Trials that counted, without this one."""
+    """Norms of the last trials that counted, oldest first, without this one, and none from before
+    an operator last rolled back or resumed: from there on the run is judged anew."""
     learning: bool
     limits_rising: bool
     """The soft start still holds the feedforward below its full limits."""

@@ -43,7 +43,7 @@ class ErrorGrowth:
     """Smallest rise over these trials that counts."""
     growth_action: Action = "freeze"
     warm_up_trials: Count = 3
-    """Trials that count before the guard speaks."""
+    """Trials before the guard speaks: at first, and after an operator rolled back or resumed."""
     ignore_below: NonNegative = 0.0
     """Error norms up to this are never growth."""
 
@@ -55,7 +55,7 @@ class ErrorGrowth:
         factor = context.error_norm / _reference(level, context)
         above = int(_number(memory, "above", 0)) + 1 if factor > self.ratio else 0
         level = min(level, _level(norms))
-        if context.counted < self.warm_up_trials or context.error_norm <= self.ignore_below:
+        if len(norms) <= self.warm_up_trials or context.error_norm <= self.ignore_below:
             return self._report(level, 0).passed()
         if above >= self.trials_above or factor > self.jump_ratio:
             reached = context.error_norm / factor
@@ -90,8 +90,8 @@ def _number(memory: Memory, key: str, default: float) -> float:
 
 
 def _reference(level: float, context: GuardContext) -> float:
-    """What the error norm is compared with: before there is a level, the best trial so far."""
-    reached = level if math.isfinite(level) else context.best_norm
+    """What the error norm is compared with: before there is a level, the best trial."""
+    reached = level if math.isfinite(level) else min(context.recent_norms, default=math.inf)
     # A norm of exactly 0 cannot be grown from by a factor; anything above it is beyond any.
     return max(reached, 5e-324)
 

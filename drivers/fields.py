@@ -15,9 +15,9 @@ def unsigned(bits: int) -> Kind:
     top = (1 << bits) - 1
 
     def check(value: Any) -> int:
-        if type(value) is not int or not 0 <= value <= top:
+        if not isinstance(value, int) or isinstance(value, bool) or not 0 <= value <= top:
             raise ValueError(f"expected an integer of 0 to {top}, found {value!r:.40}")
-        return value
+        return int(value)
 
     return check
 

@@ -1,0 +1,38 @@
+"""A frame: session, sequence number, body, CRC-32C; pure, bytes in and bytes out."""
+
+import struct
+from dataclasses import dataclass
+
+from crc32c import crc32c
+
+from drivers import limits
+from drivers.errors import WireError
+
+_HEADER = struct.Struct("<II")
+_CRC = struct.Struct("<I")
+
+
+@dataclass(frozen=True)
+class Frame:
+    session: int
+    sequence: int
+    """0 for an unnumbered message, else its number."""
+    body: bytes
+
+
+def pack_frame(session: int, sequence: int, body: bytes) -> bytes:
+    """Header, body and checksum, before any stuffing."""
+    covered = _HEADER.pack(session, sequence) + body
+    return covered + _CRC.pack(crc32c(covered))
+
+
+def unpack_frame(frame: bytes, max_body: int) -> Frame:
+    """Raises WireError of the kind "length" or "crc"."""
+    n_body = len(frame) - limits.HEADER_BYTES - limits.CRC_BYTES
+    if not 0 < n_body <= max_body:
+        raise WireError("length", f"a body of {n_body} bytes; expected 1 to {max_body}")
+    covered = frame[: -limits.CRC_BYTES]
+    (found,) = _CRC.unpack(frame[-limits.CRC_BYTES :])
+    if crc32c(covered) != found:
+        raise WireError("crc", "the frame's checksum does not agree with its bytes")
+    return Frame(*_HEADER.unpack_from(covered), covered[limits.HEADER_BYTES :])

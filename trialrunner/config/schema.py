@@ -19,8 +19,9 @@ INFINITE = "x-infinite-allowed"
 SHARED = {
     "enabled": "False switches this guard off.",
     "action": "What the guard asks for when it fires, a step of the verdict ladder.",
+    "kind": "Which of its kind.",
 }
-"""Texts of settings that every guard has, where it gives none of its own."""
+"""Texts of settings that every guard or law has, where it gives none of its own."""
 
 
 def exported_schema() -> dict[str, Any]:
@@ -65,8 +66,11 @@ def _describe(name: str, setting: dict[str, Any], definitions: dict[str, Any]) -
         return
     if "$ref" in setting:
         setting["description"] = definitions[setting["$ref"].rsplit("/", 1)[1]]["description"]
-    elif name in SHARED:
-        setting["description"] = SHARED[name]
+    else:
+        # growth_action is an action too.
+        text = SHARED.get(name.rpartition("_")[2])
+        if text:
+            setting["description"] = text
 
 
 def _tidy(node: dict[str, Any]) -> None:

@@ -26,10 +26,13 @@ class InputChannel:
     __pydantic_config__: ClassVar[dict[str, Any]] = STRICT
 
     name: Name
+    """As the rig calls it."""
     unit: Name
     """UCUM code, as the rig declares it."""
     low: float
+    """Smallest value that may be sent, in the channel's unit."""
     high: float
+    """Largest value that may be sent."""
     rate_limit_per_s: Positive = math.inf
     """Largest change per second between samples."""
     change_cap: Positive = math.inf
@@ -37,6 +40,7 @@ class InputChannel:
     pin_start: bool = True
     """The feedforward starts at zero, reached within the rate limit."""
     pin_end: bool = True
+    """The feedforward ends at zero, approached within the rate limit."""
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -46,10 +50,13 @@ class OutputChannel:
     __pydantic_config__: ClassVar[dict[str, Any]] = STRICT
 
     name: Name
+    """As the rig calls it."""
     unit: Name
+    """UCUM code, as the rig declares it."""
     low: float
-    """Range in which a measurement is believed."""
+    """Smallest measurement that is believed, in the channel's unit."""
     high: float
+    """Largest measurement that is believed."""
     scale: Positive = 1.0
     """Error of this size counts as 1 in the error norm: makes channels of different units
     comparable."""
@@ -64,7 +71,9 @@ class Horizon:
     __pydantic_config__: ClassVar[dict[str, Any]] = STRICT
 
     n_samples: PositiveCount
+    """Samples of one trial."""
     period_s: Positive
+    """Time between samples, as the rig declares it."""
     start: Literal["daemon", "rig"] = "daemon"
     """Who starts an armed trial."""
     dwell_s: NonNegative = 0.0
@@ -80,6 +89,7 @@ class FilterSettings:
     __pydantic_config__: ClassVar[dict[str, Any]] = STRICT
 
     shape: Literal["butterworth", "gaussian", "none"] = "gaussian"
+    """Magnitude over frequency: steep or without ringing in time; none does not filter."""
     bandwidth_hz: Positive = math.inf
     """Frequency at which the magnitude is -3 dB."""
     order: PositiveCount = 2

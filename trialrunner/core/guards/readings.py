@@ -3,15 +3,21 @@
 from dataclasses import dataclass
 
 import numpy as np
+from numpy.typing import NDArray
 
 from trialrunner.core.guards import MAD_TO_SIGMA
 from trialrunner.core.trial import Array
+
+Indices = NDArray[np.intp]
 
 LOCAL_SAMPLES = 25
 """Neighbours on each side that say how rough a signal is around a suspected spike."""
 
 MAX_SUSPECTS = 32
 """Largest peaks that are looked at closely; bounds the work on a noisy channel."""
+
+MEDIAN_SAMPLES = 2048
+"""Evenly spread samples are enough for the roughness of a whole trial; a median is slow."""
 
 RESOLUTION_STEPS = 4.0
 """A reference that moves by less than this many steps of the sensor need not show."""
@@ -53,20 +59,33 @@ def find_stuck(output: Array, reference: Array, share: float, min_samples: int) 
     the move, nor a reference that moves by a few steps of a coarse sensor. A jump of the reference
     is one moving sample and so never counts either. Both arrays (n_samples,).
     """
-    starts = np.concatenate(([0], np.flatnonzero(np.diff(output)) + 1))
-    ends = np.append(starts[1:], output.size)
-    if share >= 1.0 or (ends - starts).max() <= min_samples:
+    same = output[1:] == output[:-1]
+    if share >= 1.0 or np.count_nonzero(same) < min_samples:
         return None
-    moves = np.diff(reference, prepend=reference[0]) != 0
-    moves[starts] = False  # the change into a stretch is not a change during it
-    moving = np.add.reduceat(moves.astype(np.int64), starts)
-    travel = np.maximum.reduceat(reference, starts) - np.minimum.reduceat(reference, starts)
+    starts = np.concatenate(([0], np.flatnonzero(~same) + 1))
+    ends = np.append(starts[1:], output.size)
+    whole = starts.size == 1
+    long = ends - starts > min_samples
+    if not long.any():
+        return None
+    starts, ends = starts[long], ends[long]
+    moves = np.concatenate(([0], np.cumsum(reference[1:] != reference[:-1])))
+    travel = _range_within(reference, starts, ends)
+    travel[moves[ends - 1] - moves[starts] < min_samples] = 0.0
     limit = max(share * float(np.ptp(reference)), RESOLUTION_STEPS * resolution(output))
-    travel[moving < min_samples] = 0.0
     k = int(np.argmax(travel))
     if not travel[k] > limit:
         return None
-    return Stretch(int(starts[k]), int(ends[k]) - 1, float(travel[k]), limit, starts.size == 1)
+    return Stretch(int(starts[k]), int(ends[k]) - 1, float(travel[k]), limit, whole)
+
+
+def _range_within(values: Array, starts: Indices, ends: Indices) -> Array:
+    """Largest minus smallest value in each of the stretches [start, end), which are in order."""
+    edges = np.stack([starts, ends], axis=1).ravel()
+    # reduceat takes every second piece here: the others lie between the stretches.
+    edges = edges[edges < values.size]
+    top = np.maximum.reduceat(values, edges)[::2]
+    return np.asarray(top - np.minimum.reduceat(values, edges)[::2])
 
 
 def find_spike(output: Array, factor: float) -> Peak | None:
@@ -83,8 +102,10 @@ def find_spike(output: Array, factor: float) -> Peak | None:
     roughness = np.abs(np.diff(change))
     size = np.abs(change)
     height = np.minimum(size[1:-2], size[2:-1]) - np.maximum(size[:-3], size[3:])
-    height[np.signbit(change[1:-2]) == np.signbit(change[2:-1])] = 0.0
-    floor = max(resolution(output), MAD_TO_SIGMA * float(np.median(roughness)))
+    turns = np.signbit(change[1:-2]) != np.signbit(change[2:-1])
+    height = np.where(turns, height, 0.0)
+    sample = roughness[:: 1 + roughness.size // MEDIAN_SAMPLES]
+    floor = max(resolution(output), MAD_TO_SIGMA * float(np.median(sample)))
     suspects = np.flatnonzero(height > factor * floor)
     for k in suspects[np.argsort(-height[suspects], kind="stable")][:MAX_SUSPECTS]:
         limit = factor * max(floor, _local_scale(roughness, int(k) + 2))

@@ -1,6 +1,7 @@
 """Saturation: how much of the input is at a limit, and does it become ever more?"""
 
 from dataclasses import dataclass
+from statistics import fmean
 from typing import Any, ClassVar
 
 import numpy as np
@@ -39,10 +40,10 @@ class Saturation:
         if trial.purpose is not Purpose.LEARN:
             return Report(self.NAME, memory).passed()
         by_input = _limited_share(trial, context)
-        worst = int(np.argmax(by_input))
-        share = float(by_input[worst])
+        share = max(by_input)
+        worst = by_input.index(share)
         kept = self.rising_trials + 1
-        shares = [*shares, float(np.mean(by_input))][-kept:]
+        shares = [*shares, fmean(by_input)][-kept:]
         norms = [*norms, context.error_norm][-kept:]
         report = Report(self.NAME, {"shares": shares, "norms": norms})
         if self._keeps_rising(shares, norms):
@@ -66,11 +67,11 @@ class Saturation:
         return rising and norms[-1] >= norms[0]
 
 
-def _limited_share(trial: Trial, context: GuardContext) -> np.ndarray[Any, Any]:
-    """(n_inputs,): share of samples at a limit."""
-    if context.limits_rising:
-        return np.asarray(trial.limited.mean(axis=0))
-    return np.asarray((trial.limited | context.clipped).mean(axis=0))
+def _limited_share(trial: Trial, context: GuardContext) -> list[float]:
+    """Share of samples at a limit by input."""
+    limited = trial.limited if context.limits_rising else trial.limited | context.clipped
+    n_samples, n_inputs = limited.shape
+    return [int(np.count_nonzero(limited[:, j])) / n_samples for j in range(n_inputs)]
 
 
 def _floats(memory: Memory, key: str) -> list[float]:

@@ -35,4 +35,5 @@ def unpack_frame(frame: bytes, max_body: int) -> Frame:
     (found,) = _CRC.unpack(frame[-limits.CRC_BYTES :])
     if crc32c(covered) != found:
         raise WireError("crc", "the frame's checksum does not agree with its bytes")
-    return Frame(*_HEADER.unpack_from(covered), covered[limits.HEADER_BYTES :])
+    session, sequence = _HEADER.unpack_from(covered)
+    return Frame(session, sequence, covered[limits.HEADER_BYTES :])

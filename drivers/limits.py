@@ -40,3 +40,7 @@ MAX_DEPTH = 3
 MAX_TICK_HZ = 1_000_000_000
 MAX_BACKLOG_FRAMES = 100_000
 """Frames a link holds for a reader that does not read, before it calls the line broken."""
+
+MAX_BACKLOG_BYTES = 1 << 20
+"""Bytes that a byte stream's queue holds: seconds of the fastest line; bulk is sent block by block
+while the line is idle, so that only a dead line gets here."""

@@ -310,6 +310,13 @@ def test_a_run_that_is_over_takes_no_trial_and_no_request() -> None:
             rig.request(kind, "best")
 
 
+def test_arrays_that_do_not_fit_together_are_refused() -> None:
+    """Before numpy could broadcast them into a wrong error."""
+    for changes in ({"output": np.zeros((N, 2))}, {"limited": np.zeros((1, 1), dtype=bool)}):
+        with pytest.raises(ShapeError):
+            bench().play(**changes)
+
+
 @pytest.mark.parametrize(
     ("changes", "words"),
     [

@@ -217,6 +217,32 @@ def test_the_trial_that_asks_for_a_roll_back_is_not_its_target() -> None:
     assert played.state.confirm_norm == 1.0
 
 
+def test_what_an_operator_froze_stays_as_it_is() -> None:
+    """A roll back is only noted then; a halt is still a halt."""
+    played = player().play("...")
+    played.state = replace(played.state, learning=False, frozen_by="operator")
+    played.play("rr")
+    assert played.acts == "LLL=="
+    assert "frozen by operator until" in played.last.sentence
+    assert "said r" in played.last.sentence
+    played.play("h")
+    assert played.last.action is Act.HALT
+
+
+def test_a_freeze_in_a_baseline_trial_is_told() -> None:
+    """The trial is repeated anyway, so the sentence must say that learning is off as well."""
+    played = player({"baseline_trials": 2}).play("f")
+    assert "baseline trial" in played.last.sentence
+    assert "Learning is frozen by watcher" in played.last.sentence
+
+
+def test_one_floor_trial_tells_no_floor() -> None:
+    """A spread needs two."""
+    played = player({"trials": 1, "floor_trials": 1}).play("..")
+    assert "tells no repeatability floor" in played.last.sentence
+    assert "nan" not in played.last.sentence
+
+
 def test_a_frozen_probe_gives_way_to_learning_trials() -> None:
     """The experiment is not repeated while learning is off."""
     rules = Rules(LadderSettings(), StopSettings())

@@ -255,6 +255,8 @@ def _require_expected(trial: Trial, state: RunState, carry: Carry) -> None:
             f"expected trial {state.trial} ({state.purpose}), found trial {trial.index} "
             f"({trial.purpose})"
         )
+    require_shape("output", trial.output, trial.reference.shape)
+    require_shape("limited", trial.limited, carry.feedforward.shape)
     if not np.array_equal(trial.feedforward, carry.feedforward):
         raise TransitionError(
             f"trial {trial.index} was played with another feedforward than the run state holds"

@@ -47,12 +47,14 @@ class Rules:
             failed = ladder.unconfirmed(state, norm, worst, self.ladder)
             if failed is not None:
                 return failed
-        if worst.level is Level.ROLL_BACK and state.updates > 0:
+        held = not learning and state.frozen_by == ladder.OPERATOR
+        if worst.level is Level.ROLL_BACK and state.updates > 0 and not held:
             decision = ladder.roll_back(state, worst, self.ladder)
             # Only the count can end a run here: it has just been taken away from this trial.
             return self._end_if(decision, convergence.count_reason(decision.state, self.stop))
         if worst.level >= Level.FREEZE:
-            # A roll back with nothing learned yet has nowhere to go back to.
+            # A roll back with nothing learned yet has nowhere to go back to, and what an operator
+            # has frozen stays as it is.
             state = ladder.freeze(state, worst)
         else:
             state = ladder.count_clean(state, worst.level is Level.PASS, self.ladder)
@@ -63,7 +65,8 @@ class Rules:
         """The next trial where nothing stands in the way."""
         remark = f" {worst.guard}: {worst.reason}." if worst.level else ""
         if state.purpose in (Purpose.BASELINE, Purpose.CONFIRM):
-            return _repeat_for_purpose(state, norm, remark)
+            frozen = "" if state.learning else f" {self._why(state).capitalize()}."
+            return _repeat_for_purpose(state, norm, frozen + remark)
         if learns:
             best = f"best {state.best_norm:.4g} (trial {state.best_trial})"
             sentence = f"Learned from trial {state.trial}: error norm {norm:.4g}, {best}.{remark}"
@@ -123,7 +126,9 @@ def _floor(state: RunState, worst: Verdict) -> Decision:
     remark = f" {worst.guard}: {worst.reason}." if worst.level else ""
     left = state.floor_left - 1
     state = replace(state, floor_left=left)
-    floor = f"repeatability floor {state.floor_norm:.4g} from {state.floor_count} trials"
+    floor = "one floor trial tells no repeatability floor"
+    if state.floor_count > 1:
+        floor = f"repeatability floor {state.floor_norm:.4g} from {state.floor_count} trials"
     if left > 0:
         sentence = f"Trial {state.trial} was a floor trial, {left} left ({floor}).{remark}"
         return Decision(Act.REPEAT, state, sentence)

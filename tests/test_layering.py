@@ -38,7 +38,6 @@ CHEAP = {
     "trialrunner",
     "trialrunner.cli",
     "trialrunner.exit_codes",
-    "trialrunner.runtime_dir",
 }
 
 

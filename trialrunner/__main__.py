@@ -17,7 +17,6 @@ import click
 from trialrunner import __version__
 from trialrunner.cli import cli
 from trialrunner.exit_codes import ExitCode, code_of
-from trialrunner.runtime_dir import state_dir
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
@@ -75,6 +74,8 @@ def write_crash_report(error: BaseException) -> Path | None:
 
     Returns its path, None if neither can be written.
     """
+    from trialrunner.runtime_dir import state_dir
+
     stamp = datetime.now(UTC).strftime("%Y%m%dT%H%M%SZ")
     text = (
         f"trialrunner {__version__}, Python {sys.version.split()[0]}, {stamp}\n"

@@ -43,6 +43,7 @@ BY_ERROR: dict[str, ExitCode] = {
     "CoreError": ExitCode.CONFIG,
     "LinkBusy": ExitCode.BUSY,
     "DriverError": ExitCode.LINK,
+    "LinkCheckFailed": ExitCode.LINK,
     "Busy": ExitCode.BUSY,
     "RunRefused": ExitCode.DISAGREEMENT,
     "RecordError": ExitCode.RECORD,

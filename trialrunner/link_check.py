@@ -19,6 +19,7 @@ from trialrunner.conversation import Conversation
 from trialrunner.conversation import events as rig
 from trialrunner.core.clock_sync import Exchange
 from trialrunner.locks import hold_lock, link_lock_path
+from trialrunner.runtime_dir import make_private_dir
 
 EXCHANGES = 8
 """Clock exchanges whose best one is reported."""
@@ -51,23 +52,37 @@ class LinkFinding:
 def try_link(
     config: Config,
     clock: Clock | None = None,
-    opened: Callable[[str], Link] = lambda url: open_link(url, "daemon"),
+    opened: Callable[[str], Link] = open_link,
+    pause: Callable[[Link, int], None] | None = None,
 ) -> LinkFinding:
     """Greet the rig of a configuration and compare.
 
-    Raises Busy while a daemon holds the link, LinkError, LinkCheckFailed.
+    `pause(link, ns)` waits until the link has something or the time is over; a poll by default.
+    Raises Busy while a daemon holds the link, NotPrivate, LinkError, LinkCheckFailed.
     """
     url = config.link.url
-    with hold_lock(link_lock_path(url), f"the link {url}"):
+    lock = link_lock_path(url)
+    make_private_dir(lock.parent)
+    with hold_lock(lock, f"the link {url}"):
         link = opened(url)
         try:
-            return _Check(config, clock or SystemClock(), link).run()
+            return _Check(config, clock or SystemClock(), link, pause or poll).run()
         finally:
             link.close()
 
 
+def poll(link: Link, at_most_ns: int) -> None:
+    """Wait for the link; rounded up, because an early end would only spin."""
+    poller = zmq.Poller()
+    poller.register(link.pollable, zmq.POLLIN | (zmq.POLLOUT if link.wants_write else 0))
+    poller.poll(max(0, -(-at_most_ns // 1_000_000)))
+
+
 class _Check:
-    def __init__(self, config: Config, clock: Clock, link: Link) -> None:
+    def __init__(
+        self, config: Config, clock: Clock, link: Link, pause: Callable[[Link, int], None]
+    ) -> None:
+        self._pause = pause
         self._config = config
         self._clock = clock
         self._link = link
@@ -85,7 +100,7 @@ class _Check:
         while not self._done:
             self._turn()
             if self._clock.now_ns() - start_ns > PATIENCE_NS:
-                raise LinkCheckFailed(f"the rig did not get done in {PATIENCE_NS / 1e9:g} s")
+                raise LinkCheckFailed(self._trouble())
         return self._finding()
 
     def _turn(self) -> None:
@@ -100,14 +115,13 @@ class _Check:
             self._link.send(data)
         self._link.flush()
         if not self._done:
-            self._wait()
+            self._pause(self._link, self._talk.next_wake_ns() - self._clock.now_ns())
 
-    def _wait(self) -> None:
-        poller = zmq.Poller()
-        wanted = zmq.POLLIN | (zmq.POLLOUT if self._link.wants_write else 0)
-        poller.register(self._link.pollable, wanted)
-        due_ns = self._talk.next_wake_ns() - self._clock.now_ns()
-        poller.poll(max(0, -(-due_ns // 1_000_000)))
+    def _trouble(self) -> str:
+        patience_s = PATIENCE_NS / 1e9
+        if self._talk.greeted is not None and self._best is None:
+            return f"the rig greets and answers no clock exchange within {patience_s:g} s"
+        return f"the rig talks and does not get done within {patience_s:g} s"
 
     def _on_event(self, event: rig.RigEvent) -> None:
         match event:
@@ -134,8 +148,8 @@ class _Check:
 
     def _finding(self) -> LinkFinding:
         greeted = self._talk.greeted
-        if greeted is None or self._best is None:
-            raise LinkCheckFailed("the rig greeted and no clock exchange with it succeeded")
+        assert greeted is not None
+        assert self._best is not None
         channels = (*greeted.inputs, *greeted.outputs, *greeted.auxiliary)
         disagreements = agree(self._config, greeted.greeting, channels)
         return LinkFinding(

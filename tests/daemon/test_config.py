@@ -94,13 +94,13 @@ def test_the_record_is_named_after_the_run_unless_told() -> None:
 def test_the_operators_addresses_are_private_to_user_and_run(
     monkeypatch: pytest.MonkeyPatch, tmp_path: Path
 ) -> None:
-    """A directory named after the run, in the runtime directory where there is one."""
+    """A socket named after the run, in the runtime directory where there is one."""
     monkeypatch.setenv("XDG_RUNTIME_DIR", "/run/user/7")
     config = load_text(TEXT)
-    assert config.command_url == "ipc:///run/user/7/trialrunner/oven/command"
-    assert config.telemetry_url == "ipc:///run/user/7/trialrunner/oven/telemetry"
+    assert config.command_url == "ipc:///run/user/7/trialrunner/oven.command"
+    assert config.telemetry_url == "ipc:///run/user/7/trialrunner/oven.telemetry"
     monkeypatch.delenv("XDG_RUNTIME_DIR")
-    assert f"-{os.getuid()}/oven/command" in config.command_url
+    assert f"-{os.getuid()}/oven.command" in config.command_url
     told = load_text(TEXT, ["operator.command_url=tcp://127.0.0.1:7001"])
     assert told.command_url == "tcp://127.0.0.1:7001"
 

@@ -5,6 +5,7 @@ from collections.abc import Iterable, Iterator, Sequence
 
 import numpy as np
 
+from drivers.errors import LinkError
 from drivers.limits import MAX_SAMPLES, MAX_TEXT_BYTES, MAX_UNIT_BYTES
 from trialrunner.channel_file import ChannelFileError
 from trialrunner.config.lines import Path as KeyPath
@@ -18,7 +19,9 @@ from trialrunner.core.trial import Array
 from trialrunner.reference import ProfileReference
 from trialrunner.runtime_dir import MAX_IPC_PATH_BYTES
 
-LINK_SCHEMES = ("serial", "zmq+tcp", "zmq+ipc", "memory")
+LINK_SCHEMES = ("serial", "zmq+tcp", "zmq+ipc")
+"""Links that a daemon opens; `drivers.open` knows more, which only a rig's end uses."""
+
 LOOPBACK = ("127.", "localhost", "[::1]")
 
 
@@ -113,6 +116,8 @@ def _address_problems(config: Config) -> Iterator[Problem]:
     if not mark or scheme not in LINK_SCHEMES:
         known = ", ".join(f"{one}://" for one in LINK_SCHEMES)
         yield Problem(("link", "url"), f"expected one of {known}, found {config.link.url!r}")
+    elif scheme == "serial":
+        yield from _serial_problems(config.link.url)
     for key in ("command_url", "telemetry_url"):
         text = _socket_trouble(getattr(config, key))
         if text:
@@ -120,6 +125,15 @@ def _address_problems(config: Config) -> Iterator[Problem]:
     if config.command_url == config.telemetry_url:
         text = f"the same address as operator.command_url: {config.command_url}"
         yield Problem(("operator", "telemetry_url"), text)
+
+
+def _serial_problems(url: str) -> Iterator[Problem]:
+    from drivers.serial_link import parse_serial_url
+
+    try:
+        parse_serial_url(url)
+    except LinkError as error:
+        yield Problem(("link", "url"), str(error))
 
 
 def _socket_trouble(url: str) -> str:

@@ -49,7 +49,8 @@ else:
     Law = Annotated[reduce(or_, _laws), Field(discriminator="kind")] if len(_laws) > 1 else _laws[0]
     Guards = create_model(
         "Guards",
-        __config__=_MODEL,
+        # No attribute docstrings: there is no source text to take them from.
+        __config__=ConfigDict(extra="forbid", strict=True, frozen=True),
         __doc__="Guards by name; each has defaults and need not be named.",
         **{name: (cls, Field(default_factory=cls)) for name, (_, cls) in guard_table().items()},
     )

@@ -48,8 +48,8 @@ class OperatorTable:
     __pydantic_config__: ClassVar[dict[str, Any]] = STRICT
 
     command_url: Name | None = None
-    """ZeroMQ address for requests (ipc://, or tcp:// on the loopback); a socket in a private
-    directory named after the run if left out."""
+    """ZeroMQ address for requests (ipc://, or tcp:// on the loopback); a socket named after
+    the run, in a private directory, if left out."""
     telemetry_url: Name | None = None
     """ZeroMQ address at which the state is published; likewise."""
 

@@ -50,14 +50,15 @@ def point_to_point(
 
     `waypoints`: (n_points, n_axes); sample 0 is the first, and each is met to the last bit. Limits:
     one number or (n_axes,), in the axes' units, infinite for none. `dwell_s`: rest at each
-    waypoint, the first and the last included; one number or (n_points,). Raises SettingError if
-    lists do not fit each other, or if the moves need more than `n_samples`; the text says how many.
+    waypoint, the first and the last included; one number or (n_points,); between two moves at least
+    as many samples as keep their derivatives apart, up to 3. Raises SettingError if lists do not
+    fit each other, or if the moves need more than `n_samples`; the text says how many.
     """
     points = np.asarray(waypoints, dtype=np.float64)
-    if points.ndim != 2 or points.size == 0:
+    if points.ndim != 2 or points.size == 0 or not np.all(np.isfinite(points)):
         raise SettingError(
-            "reference.waypoints: expected a list of points with one coordinate an axis, found an "
-            f"array of shape {points.shape}"
+            "reference.waypoints: expected a list of points with one finite coordinate an axis, "
+            f"found {points.tolist()}"
         )
     n_points, n_axes = points.shape
     limits = np.array(
@@ -69,7 +70,7 @@ def point_to_point(
         ]
     )
     rests = _spread("dwell_s", dwell_s, n_points, "waypoints") / period_s
-    dwells = [math.ceil(rest * (1.0 - ROUNDING)) for rest in rests.tolist()]
+    dwells = _dwells(rests, limits)
     plans = [_plan(np.abs(step), limits, period_s) for step in np.diff(points, axis=0)]
     needed = 1 + sum(dwells) + sum(_length(plan) for plan in plans)
     if needed > n_samples:
@@ -79,6 +80,15 @@ def point_to_point(
             "make the trial longer or raise the limits"
         )
     return _assemble(points, plans, dwells, n_samples)
+
+
+def _dwells(rests: Array, limits: Array) -> list[int]:
+    """Whole samples of rest at each waypoint, from rests in samples."""
+    dwells = [math.ceil(rest * (1.0 - ROUNDING)) for rest in rests.tolist()]
+    # A derivative of order n looks n samples back: without this rest, the end of a move and the
+    # beginning of the next one would add up in it.
+    order = int(np.flatnonzero(np.isfinite(limits).any(axis=1)).max(initial=-1)) + 1
+    return [dwells[0], *(max(dwell, order - 1) for dwell in dwells[1:-1]), *dwells[1:][-1:]]
 
 
 def _spread(key: str, value: ArrayLike, count: int, what: str) -> Array:
@@ -117,10 +127,9 @@ def _plan(distance: Array, limits: Array, period_s: float) -> tuple[int, ...]:
     if not moving.any():
         return ()
     powers = period_s ** np.arange(1, 5)
-    velocity, acceleration, jerk, snap = (
-        float(np.min(limit[moving] / distance[moving]) * power)
-        for limit, power in zip(limits, powers, strict=True)
-    )
+    with np.errstate(over="ignore"):  # next to no distance: no limit
+        shares = np.min(limits[:, moving] / distance[moving], axis=1)
+    velocity, acceleration, jerk, snap = (shares * powers).tolist()
     return _counts(velocity, acceleration, jerk, snap)
 
 

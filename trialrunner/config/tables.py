@@ -70,6 +70,19 @@ class RehearsalTable:
     seed: Count = 0
     """Seed of the mock rig's noise and faults."""
     faults: Annotated[tuple[Name, ...], MaxLen(100)] = ()
-    """Faults in the mock rig's own notation."""
+    """Faults in the mock rig's notation, such as "drop@trial=12" or "late@p=0.02,size=0.1";
+    `python -m mock_rig --help` lists them."""
     options: dict[str, Option] = field(default_factory=dict)
-    """More options of the mock rig by name, handed on as they are."""
+    """More options of the mock rig by name: table_capacity = 1000, rig_starts = true."""
+
+    def arguments(self) -> list[str]:
+        """Command line of `python -m mock_rig`, apart from the link's address."""
+        words = ["--plant", self.plant, "--seed", str(self.seed)]
+        words += [word for fault in self.faults for word in ("--fault", fault)]
+        for name, value in self.options.items():
+            flag = f"--{name.replace('_', '-')}"
+            if isinstance(value, bool):
+                words += [flag] if value else []
+            else:
+                words += [flag, str(value)]
+        return words

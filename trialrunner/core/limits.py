@@ -224,12 +224,12 @@ class Limits:
         for i in range(len(low)):
             if not self._low[i] <= self._high[i]:
                 raise SettingError(
-                    f"input {i}: no number of sample type {self._sample_type} lies within "
+                    f"inputs.{i}: no number of sample type {self._sample_type} lies within "
                     f"{low[i]!r} to {high[i]!r}; widen low and high"
                 )
             if (self._pin_start[i] or self._pin_end[i]) and self._rest[i] != 0.0:
                 raise SettingError(
-                    f"input {i}: pin_start and pin_end need zero within low and high, found "
+                    f"inputs.{i}: pin_start and pin_end need zero within low and high, found "
                     f"{low[i]:g} to {high[i]:g}; switch the pins off or widen the limits"
                 )
 

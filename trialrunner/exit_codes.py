@@ -41,6 +41,7 @@ BY_ERROR: dict[str, ExitCode] = {
     "ConfigError": ExitCode.CONFIG,
     "ChannelFileError": ExitCode.CONFIG,
     "CoreError": ExitCode.CONFIG,
+    "RehearsalError": ExitCode.CONFIG,
     "LinkBusy": ExitCode.BUSY,
     "DriverError": ExitCode.LINK,
     "LinkCheckFailed": ExitCode.LINK,

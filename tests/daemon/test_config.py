@@ -180,18 +180,15 @@ def test_a_profile_needs_no_file_and_starts_at_its_first_waypoint() -> None:
     assert np.abs(np.diff(reference[:, 0])).max() <= 1.0 * 0.5 * (1 + 1e-12)
 
 
-def test_a_rehearsal_becomes_the_mock_rigs_command_line() -> None:
-    """Faults repeat, flags have no value, names get dashes."""
-    text = (
-        PROFILE + "[rehearsal]\nplant = 'oven'\nseed = 3\nfaults = ['drop@trial=2', 'nan@p=0.1']\n"
-    )
-    text += "options = {table_capacity = 50, rig_starts = true, keep_nothing = false}\n"
+def test_a_rehearsal_names_its_plant_faults_and_options() -> None:
+    """Values of the mock rig's own options are handed on as they are."""
+    text = PROFILE + "[rehearsal]\nplant = 'oven'\nseed = 3\nfaults = ['drop@trial=2']\n"
+    text += "options = {table_capacity = 50, rig_starts = true}\n"
     rehearsal = load_text(text).rehearsal
     assert rehearsal is not None
-    assert " ".join(rehearsal.arguments()) == (
-        "--plant oven --seed 3 --fault drop@trial=2 --fault nan@p=0.1 "
-        "--table-capacity 50 --rig-starts"
-    )
+    assert (rehearsal.plant, rehearsal.link, rehearsal.seed) == ("oven", "serial", 3)
+    assert rehearsal.faults == ("drop@trial=2",)
+    assert rehearsal.options == {"table_capacity": 50, "rig_starts": True}
 
 
 # --- the stored text --------------------------------------------------------------------------

@@ -74,15 +74,3 @@ class RehearsalTable:
     `python -m mock_rig --help` lists them."""
     options: dict[str, Option] = field(default_factory=dict)
     """More options of the mock rig by name: table_capacity = 1000, rig_starts = true."""
-
-    def arguments(self) -> list[str]:
-        """Command line of `python -m mock_rig`, apart from the link's address."""
-        words = ["--plant", self.plant, "--seed", str(self.seed)]
-        words += [word for fault in self.faults for word in ("--fault", fault)]
-        for name, value in self.options.items():
-            flag = f"--{name.replace('_', '-')}"
-            if isinstance(value, bool):
-                words += [flag] if value else []
-            else:
-                words += [flag, str(value)]
-        return words

@@ -1,0 +1,95 @@
+"""What leaves the rig: frames with the faults of the line, in order and in time; pure."""
+
+from collections import deque
+from collections.abc import Sequence
+from random import Random
+
+from drivers.codec import pack_frame
+from drivers.messages import ANSWERS, Message, Samples, encode
+
+SECOND_NS = 1_000_000_000
+LINE_FAULTS = ("drop", "duplicate", "reorder", "corrupt", "late")
+
+
+class Sender:
+    """Packs messages and spoils what the faults of the trial say."""
+
+    def __init__(self) -> None:
+        self.session = 0
+        self.peer = 0
+        self.silent_until_ns = 0
+        self._ready: deque[tuple[bytes, int]] = deque()
+        self._held: list[tuple[int, bytes, int]] = []
+        self._left: dict[str, float] = {}
+        self._chance = Random(0)
+
+    def arm(self, faults: dict[str, float], chance: Random) -> None:
+        """The line's faults for the trial that begins."""
+        self._left = {kind: faults[kind] for kind in LINE_FAULTS if kind in faults}
+        for kind, name in (("lost_answer", "lose"), ("double_answer", "double")):
+            if kind in faults:
+                self._left[name] = faults[kind]
+        self._chance = chance
+
+    def send(
+        self, message: Message, now_ns: int, session: int | None = None, peer: int | None = None
+    ) -> None:
+        if now_ns < self.silent_until_ns:
+            return
+        frame = pack_frame(self.session if session is None else session, 0, encode(message))
+        to = self.peer if peer is None else peer
+        if isinstance(message, ANSWERS):
+            if self._use("lose"):
+                return
+            if self._use("double"):
+                self._ready.append((frame, to))
+        self._ready.append((frame, to))
+
+    def send_blocks(self, blocks: Sequence[Samples], now_ns: int, spoil: bool) -> None:
+        """Sample blocks; `spoil` is false for blocks that were asked for again."""
+        for block in blocks:
+            if now_ns < self.silent_until_ns:
+                return
+            frame = pack_frame(self.session, 0, encode(block))
+            for spoiled in self._spoil(frame, now_ns) if spoil else [frame]:
+                self._ready.append((spoiled, self.peer))
+
+    def _spoil(self, frame: bytes, now_ns: int) -> list[bytes]:
+        if "late" in self._left:
+            due_ns = now_ns + int(self._left.pop("late") * SECOND_NS)
+            self._held.append((due_ns, frame, self.peer))
+            return []
+        if self._use("drop"):
+            return []
+        if self._use("duplicate"):
+            return [frame, frame]
+        if self._use("corrupt"):
+            at = self._chance.randrange(len(frame))
+            return [frame[:at] + bytes([frame[at] ^ 0x5A]) + frame[at + 1 :]]
+        if self._ready and self._use("reorder"):
+            before, to = self._ready.pop()
+            self._ready.append((frame, to))
+            return [before]
+        return [frame]
+
+    def _use(self, kind: str) -> bool:
+        left = self._left.get(kind, 0)
+        if left >= 1:
+            self._left[kind] = left - 1
+        return left >= 1
+
+    def take(self, now_ns: int) -> list[tuple[bytes, int]]:
+        """Frames to write now, each with its peer."""
+        for held in [one for one in self._held if one[0] <= now_ns]:
+            self._held.remove(held)
+            self._ready.append(held[1:])
+        frames = list(self._ready)
+        self._ready.clear()
+        return frames
+
+    def next_wake_ns(self) -> int | None:
+        return min((due_ns for due_ns, _, _ in self._held), default=None)
+
+    def forget(self) -> None:
+        self._ready.clear()
+        self._held.clear()

@@ -1,0 +1,139 @@
+"""Tables that the daemon sends: stored whole and verified, or streamed under credit; pure."""
+
+import numpy as np
+from numpy.typing import NDArray
+
+from drivers.messages import Credit, Table, TableBlock, TableOpen
+from drivers.tables import missing_spans, table_crc
+
+LIMIT_SLACK = 1e-6
+"""Relative slack of the rig's own limit check: rounding of the wire's sample type."""
+
+
+class StoredTable:
+    """One named table. A streamed one holds `capacity` samples and forgets what was played."""
+
+    def __init__(self, opened: TableOpen, sample_type: str, capacity: int) -> None:
+        self.opened = opened
+        self.verified = False
+        self._dtype = np.dtype(f"<{sample_type}")
+        self._capacity = capacity
+        size = min(opened.n_samples, capacity) if opened.streamed else opened.n_samples
+        self._rows = np.zeros((size, opened.n_channels), self._dtype)
+        self._here = np.zeros(size, dtype=bool)
+        self._have = 0
+        self._played = 0
+        self._credited = 0
+        self._crc = 0
+        self.gap_told = False
+
+    @property
+    def row_bytes(self) -> int:
+        return self.opened.n_channels * self._dtype.itemsize
+
+    def take(self, block: TableBlock) -> bool:
+        """Store a block; false if it does not fit where it says."""
+        count, rest = divmod(len(block.data), self.row_bytes)
+        if rest or not count or block.first + count > self.opened.n_samples:
+            return False
+        rows = np.frombuffer(block.data, self._dtype).reshape(count, -1)
+        if self.opened.streamed:
+            return self._take_next(block.first, rows)
+        self._rows[block.first : block.first + count] = rows
+        self._here[block.first : block.first + count] = True
+        return True
+
+    def _take_next(self, first: int, rows: NDArray[np.floating]) -> bool:
+        """In order only, and only into free room."""
+        if first != self._have or first + len(rows) > self._played + self._capacity:
+            return False
+        places = np.arange(first, first + len(rows)) % len(self._rows)
+        self._rows[places] = rows
+        self._have += len(rows)
+        self.gap_told = False
+        return True
+
+    def close(self) -> None:
+        """Check whether it is whole and of the announced checksum."""
+        whole = bool(self._here.all())
+        self.verified = whole and table_crc(self._rows.tobytes()) == self.opened.crc
+        if whole and not self.verified:
+            self._here[:] = False
+
+    def missing(self) -> tuple[tuple[int, int], ...]:
+        return () if self.verified or not self._here.any() else missing_spans(self._here)
+
+    def credit(self) -> Credit:
+        upto = min(self._played + self._capacity, self.opened.n_samples)
+        self._credited = upto
+        return Credit(self.opened.table, self.opened.revision, self._have, upto)
+
+    @property
+    def credit_due(self) -> bool:
+        """A quarter of the memory has become free since the last credit."""
+        upto = min(self._played + self._capacity, self.opened.n_samples)
+        enough = max(1, self._capacity // 4)
+        return upto - self._credited >= enough or (
+            upto > self._credited and upto == self.opened.n_samples
+        )
+
+    @property
+    def ready(self) -> bool:
+        """Enough is here to arm."""
+        if not self.opened.streamed:
+            return self.verified
+        return self._have >= min(self._capacity, self.opened.n_samples)
+
+    def rewind(self) -> None:
+        """Before a trial that plays a stored table from its beginning."""
+        if not self.opened.streamed:
+            self._played = 0
+            self._crc = 0
+
+    def row(self, index: int) -> list[float] | None:
+        """The sample to play now, None if it is not here: an underrun."""
+        if self.opened.streamed and index >= self._have:
+            return None
+        row = self._rows[index % len(self._rows)]
+        if self.opened.streamed:
+            self._crc = _extend_crc(self._crc, row.tobytes())
+            self._played = index + 1
+        values: list[float] = row.tolist()
+        return values
+
+    def row_zero(self) -> list[float]:
+        """The first sample, without playing it."""
+        values: list[float] = self._rows[0].tolist()
+        return values
+
+    def played_crc(self, count: int) -> int:
+        """CRC-32C over the samples that were played."""
+        if self.opened.streamed:
+            return self._crc
+        if count >= self.opened.n_samples:
+            return self.opened.crc
+        return table_crc(self._rows[:count].tobytes())
+
+    def beyond(
+        self, low: NDArray[np.float64], high: NDArray[np.float64], step: NDArray[np.float64]
+    ) -> str:
+        """What breaks the rig's own limits, in words; empty if nothing does."""
+        rows = self._rows.astype(np.float64)
+        slack = LIMIT_SLACK * np.maximum(np.abs(low), np.abs(high))
+        if ((rows < low - slack) | (rows > high + slack)).any():
+            return "a sample lies outside the declared range"
+        change = np.abs(np.diff(rows, axis=0))
+        with np.errstate(invalid="ignore"):
+            if (change > step * (1 + LIMIT_SLACK) + slack).any():
+                return "samples change faster than the declared rate"
+        return "" if np.isfinite(rows).all() else "a sample is not a number"
+
+
+def _extend_crc(crc: int, data: bytes) -> int:
+    from crc32c import crc32c
+
+    extended: int = crc32c(data, crc)
+    return extended
+
+
+Tables = dict[Table, StoredTable]

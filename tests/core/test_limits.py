@@ -66,14 +66,15 @@ def limits_and_wishes(draw: st.DrawFn) -> tuple[dict[str, Any], Array, Array, fl
     """Random limits, a wish, a former feedforward, and the share of the soft start."""
     wish = draw(signals())
     former = np.resize(draw(signals()), wish.size)
-    low = draw(st.sampled_from([-1.0, -0.3, 0.0, -np.inf, -1e6]))
+    low = draw(st.sampled_from([-1.0, -0.3, 0.0, 0.05, -np.inf, -1e6]))
+    may_pin = st.booleans() if low <= 0.0 else st.just(False)
     changes = {
         "low": low,
         "high": draw(st.sampled_from([1.0, 0.1, 3.0, np.inf, 1e6])),
         "rate_per_s": draw(st.sampled_from([np.inf, 1e-4, 0.37, 10.0, 123.4])),
         "change_cap": draw(st.sampled_from([np.inf, 1e-3, 0.2, 5.0])),
-        "pin_start": draw(st.booleans()),
-        "pin_end": draw(st.booleans()),
+        "pin_start": draw(may_pin),
+        "pin_end": draw(may_pin),
         "method": draw(st.sampled_from(METHODS)),
         "sample_type": draw(st.sampled_from(["f4", "f8"])),
     }
@@ -218,6 +219,15 @@ def test_hard_limits_beat_the_cap_when_they_became_tighter() -> None:
     sent = limits.apply(former, former).feedforward
     assert np.allclose(sent, 0.5)
     assert sent.max() <= 0.5
+
+
+def test_a_box_that_left_the_former_feedforward_behind_is_entered_on_the_wires_numbers() -> None:
+    """From zero into a box that begins at ten, a cap of 0.1 apart: still float32 numbers."""
+    changes = {"low": 10.0, "high": 20.0, "change_cap": 0.1, "sample_type": "f4"}
+    limits = make_limits(40, **changes)
+    sent = limits.apply(np.full((40, 1), 30.0), np.zeros((40, 1))).feedforward[:, 0]
+    assert np.allclose(sent, 10.1, rtol=0, atol=1e-5)
+    assert_rig_accepts(sent, {**changes, "rate_per_s": 10.0})
 
 
 def test_the_soft_start_scales_the_box_about_rest() -> None:

@@ -176,7 +176,7 @@ class Limits:
         in_box = np.clip(wish, low, high)
         reach = _size(in_box)
         if previous is not None:
-            before = _size(previous)
+            before = max(_size(previous), _size(np.clip(previous, low, high)))
             reach = max(before, min(reach, before + float(self._change_cap[i])))
         step = self._step(reach)
         bottom, top = np.ceil(low / step), np.floor(high / step)
@@ -225,7 +225,7 @@ class Limits:
             if not self._low[i] <= self._high[i]:
                 raise SettingError(
                     f"inputs.{i}: no number of sample type {self._sample_type} lies within "
-                    f"{low[i]!r} to {high[i]!r}; widen low and high"
+                    f"{low[i]:.10g} to {high[i]:.10g}; widen low and high"
                 )
             if (self._pin_start[i] or self._pin_end[i]) and self._rest[i] != 0.0:
                 raise SettingError(

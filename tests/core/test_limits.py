@@ -172,6 +172,47 @@ def test_the_clamp_walks_stretches_longer_than_its_first_piece() -> None:
     assert clamp_rate(goal, 0.001).tolist() == naive_clamp(goal, 0.001)
 
 
+@pytest.mark.parametrize("seed", range(20))
+def test_the_clamp_is_the_plain_loop_where_stretches_touch(seed: int) -> None:
+    """Few steps close together in a long quiet signal, some just after another was made up for."""
+    rng = np.random.default_rng(seed)
+    goal = np.zeros(2000)
+    goal[500:540] = rng.integers(-4, 5, 40) / 2.0
+    assert clamp_rate(goal, 1.0).tolist() == naive_clamp(goal, 1.0)
+
+
+@pytest.mark.parametrize("sample_type", ["f4", "f8"])
+def test_a_hair_is_left_for_a_rig_that_rounds_rate_and_period(sample_type: str) -> None:
+    """Large rates ridden at full swing, where a rounding error of the product would show."""
+    swing = np.where(np.arange(20) % 2, 1.0, -1.0)
+    for rate in np.random.default_rng(4).uniform(20.0, 199.0, 300):
+        changes = {"low": -1.0, "high": 1.0, "rate_per_s": float(rate), "sample_type": sample_type}
+        sent = make_limits(20, **changes).apply(swing[:, None]).feedforward[:, 0]
+        assert_rig_accepts(sent, changes)
+        assert np.abs(np.diff(sent)).max() > 0.009999 * rate
+
+
+@pytest.mark.parametrize("sample_type", ["f4", "f8"])
+def test_box_limits_that_the_wire_cannot_hold_are_rounded_inwards(sample_type: str) -> None:
+    """Whichever way the nearest number of the sample type lies."""
+    wish = np.array([-9.0, 9.0])
+    for low, high in np.random.default_rng(5).uniform(0.1, 2.0, (200, 2)):
+        changes = {"low": -low, "high": high, "rate_per_s": np.inf, "sample_type": sample_type}
+        sent = make_limits(2, **changes).apply(wish[:, None]).feedforward[:, 0]
+        assert_rig_accepts(sent, changes)
+        assert np.allclose(sent, [-low, high], rtol=0, atol=1e-6)
+
+
+def test_the_cap_holds_exactly_against_a_signal_off_the_grid() -> None:
+    """A larger next signal has a coarser grid; the rounding of the former one is allowed for."""
+    rng = np.random.default_rng(6)
+    limits = make_limits(30, rate_per_s=np.inf, change_cap=0.013, sample_type="f4")
+    for size in (1e-3, 1e-2, 0.1, 0.9):
+        former = quantise(size * rng.uniform(-1.0, 1.0, (30, 1)), "f4")
+        sent = limits.apply(rng.normal(size=(30, 1)), former).feedforward
+        assert np.abs(sent - former).max() <= 0.013
+
+
 @settings(max_examples=200, deadline=None)
 @given(signals(60), st.sampled_from([0.05, 0.5, 2.0]))
 def test_the_bands_are_the_tightest_signals_within_the_rate(goal: Array, rate: float) -> None:

@@ -8,10 +8,12 @@ NPZ: one array a channel, by name, of shape (n_samples,) or (n_samples, 1); no p
 """
 
 import csv
+import math
 import re
 import zipfile
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from itertools import chain
 from pathlib import Path
 
 import numpy as np
@@ -67,45 +69,64 @@ class _Rows:
     def line(self) -> int:
         return self._reader.line_num
 
-    def next(self) -> list[str] | None:
+    def __iter__(self) -> Iterator[list[str]]:
         try:
             for row in self._reader:
-                if any(cell.strip() for cell in row) and not row[0].lstrip().startswith("#"):
-                    return row
+                first = row[0].lstrip() if row else ""
+                if first[:1] != "#" and (first or any(cell.strip() for cell in row)):
+                    yield row
         except csv.Error as error:
             raise self.error(f"not CSV: {error}") from None
-        return None
 
     def error(self, text: str) -> ChannelFileError:
         return ChannelFileError(f"{self.path}, line {self.line}: {text}")
 
 
 def _read_csv(rows: _Rows, columns: Sequence[Column], n_samples: int) -> Array:
-    header = rows.next()
+    waiting = iter(rows)
+    header = next(waiting, None)
     if header is None:
         raise ChannelFileError(f"{rows.path}: expected a header row with column names, found none")
     names, units = _parse_header(header)
     places = [_place(rows, names, column) for column in columns]
     _check_units(rows, columns, [units[i] for i in places])
-    table = np.empty((n_samples, len(columns)))
-    row = rows.next()
-    if row is not None and not any(_is_number(cell) for cell in row):
-        _check_width(rows, row, names)
-        _check_units(rows, columns, [row[i].strip() for i in places])
-        row = rows.next()
+    first = next(waiting, None)
+    if first is not None and not any(_is_number(cell) for cell in first):
+        _check_width(rows, first, names)
+        _check_units(rows, columns, [first[i].strip() for i in places])
+    elif first is not None:
+        waiting = chain((first,), waiting)
+    return _read_samples(rows, waiting, names, places, n_samples)
+
+
+def _read_samples(
+    rows: _Rows, waiting: Iterator[list[str]], names: list[str], places: list[int], n_samples: int
+) -> Array:
+    table = np.empty((n_samples, len(places)))
     count = 0
-    while row is not None:
+    for row in waiting:
         if count == n_samples:
             raise rows.error(f"expected {n_samples} samples (trial.n_samples), found more")
         _check_width(rows, row, names)
-        table[count] = [_number(rows, names[i], row[i]) for i in places]
+        try:
+            values = [float(row[i]) for i in places]
+        except ValueError:
+            values = [math.nan]
+        if not all(map(math.isfinite, values)):
+            raise _bad_cell(rows, row, names, places)
+        table[count] = values
         count += 1
-        row = rows.next()
     if count < n_samples:
         raise ChannelFileError(
             f"{rows.path}: expected {n_samples} samples (trial.n_samples), found {count}"
         )
     return table
+
+
+def _bad_cell(rows: _Rows, row: list[str], names: list[str], places: list[int]) -> ChannelFileError:
+    place = next(i for i in places if not _is_number(row[i]) or not math.isfinite(float(row[i])))
+    kind = "a finite number" if _is_number(row[place]) else "a number"
+    return rows.error(f"column {names[place]!r}: expected {kind}, found {row[place].strip()!r}")
 
 
 def _parse_header(header: list[str]) -> tuple[list[str], list[str]]:
@@ -150,16 +171,6 @@ def _is_number(cell: str) -> bool:
     except ValueError:
         return False
     return True
-
-
-def _number(rows: _Rows, name: str, cell: str) -> float:
-    try:
-        value = float(cell)
-    except ValueError:
-        raise rows.error(f"column {name!r}: expected a number, found {cell!r}") from None
-    if not np.isfinite(value):
-        raise rows.error(f"column {name!r}: expected a finite number, found {cell.strip()!r}")
-    return value
 
 
 def _read_npz(path: Path, columns: Sequence[Column], n_samples: int) -> Array:

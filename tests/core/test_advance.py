@@ -164,7 +164,10 @@ def test_floor_trials_repeat_the_feedforward_of_the_last_trial() -> None:
 def test_the_first_feedforward_is_zero_or_the_one_given() -> None:
     """Given ones are limited and rounded to the rig's sample type."""
     advancer = bench().advancer
-    assert not advancer.begin()[1].feedforward.any()
+    state, carry = advancer.begin()
+    assert (state.trial, state.purpose) == (0, Purpose.LEARN)
+    assert not carry.feedforward.any()
+    assert carry.mean_error.shape == (N, 1)
     _, carry = advancer.begin(np.full((N, 1), 7.1))
     assert carry.feedforward.max() == np.float32(5.0)
     _, carry = advancer.begin(np.full((N, 1), 0.1))
@@ -229,6 +232,24 @@ def test_a_void_trial_changes_nothing_but_the_count() -> None:
     assert "integrity" in outcome.sentence
 
 
+def test_guards_remember_from_trial_to_trial() -> None:
+    """Their memories go through the state; a guard without one leaves no entry."""
+    rig = bench()
+    for _ in range(6):
+        rig.play()
+    assert set(rig.state.memories) == {"error_growth", "saturation", "law"}
+    assert len(rig.state.memories["saturation"]["shares"]) == 6
+
+
+def test_an_operator_takes_over_a_guards_freeze() -> None:
+    """Then only an operator ends it, and counting clean trials starts anew."""
+    rig = bench()
+    rig.play()
+    rig.state = replace(rig.state, learning=False, frozen_by="saturation", clean_in_row=4)
+    assert "frozen by saturation" in rig.request("freeze")
+    assert (rig.state.frozen_by, rig.state.clean_in_row) == ("operator", 0)
+
+
 def test_learning_guards_see_no_void_trial() -> None:
     """Only admission speaks about a trial that does not count."""
     names = {verdict.guard for verdict in bench().play(**VOID).verdicts}
@@ -244,7 +265,7 @@ def test_an_error_that_is_no_number_never_teaches_even_without_integrity() -> No
     before = rig.carry
     outcome = rig.play(output=np.full((N, 1), np.inf))
     assert outcome.void
-    assert outcome.verdicts[-1].guard == "ladder"
+    assert [verdict.guard for verdict in outcome.verdicts][-2:] == ["start_timing", "ladder"]
     assert rig.carry is before
 
 
@@ -337,6 +358,7 @@ def test_freeze_and_learn_by_an_operator() -> None:
     rig.play()
     assert "until an operator" in rig.request("freeze")
     assert "already" in rig.request("freeze")
+    assert (rig.state.learning, rig.state.frozen_by) == (False, "operator")
     played = rig.carry.feedforward
     for _ in range(8):
         assert rig.play().action == "repeat"

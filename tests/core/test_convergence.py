@@ -35,6 +35,8 @@ def test_best_first_and_last_good_are_kept() -> None:
     assert (state.last_good_trial, state.last_good_norm) == (2, 2.0)
     assert (state.recent_norms, state.recent_trials) == ((3.0, 1.0, 2.0), (0, 1, 2))
     assert state.counted == 3
+    equal, _ = run([1.0], StopSettings(), state=state)
+    assert equal.best_trial == 1, "an equal norm does not displace it"
 
 
 @pytest.mark.parametrize(
@@ -97,10 +99,18 @@ def test_baseline_and_probe_never_converge(purpose: Purpose) -> None:
 
 def test_a_run_ends_stalled() -> None:
     """No improvement of 2 % over the last one for three trials."""
-    _, reasons = run([2.0, 1.0, 0.99, 0.985, 0.985], StopSettings(stall_trials=3))
+    settings = StopSettings(stall_trials=3, stall_improvement=0.25)
+    _, reasons = run([2.0, 1.0, 0.99, 0.75, 0.75], settings)
     assert reasons[:4] == [""] * 4
-    for part in ("stalled", "3 trials", "limit 3", "on 1 by 0.02"):
+    for part in ("stalled", "3 trials", "limit 3", "on 1 by 0.25"):
         assert part in reasons[4]
+
+
+def test_a_stall_of_one_trial_is_allowed() -> None:
+    """The tightest setting ends at the first trial that is no better."""
+    _, reasons = run([2.0, 1.0, 1.0], StopSettings(stall_trials=1))
+    assert reasons[:2] == ["", ""]
+    assert reasons[2]
 
 
 def test_small_improvements_add_up() -> None:

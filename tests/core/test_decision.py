@@ -176,9 +176,10 @@ def test_a_tolerance_ends_the_run_after_the_floor() -> None:
     """Converged at trial 2; two floor trials; the reason is kept till the end."""
     played = player({"tolerance": 0.5, "floor_trials": 2}).play(".....", [2, 1, 0.5, 3, 0.1])
     assert (played.purposes, played.acts) == ("lllff", "LL==F")
-    assert played.state.over.startswith("converged")
+    assert played.state.over.startswith("converged: the error norm 0.5")
     assert "2 floor trials" in played.decisions[2].sentence
-    assert "repeatability floor" in played.last.sentence
+    assert all(k.sentence.startswith("Converged: the") for k in played.decisions[2::2])
+    assert played.state.over == played.decisions[2].state.ending
     assert played.state.best_norm == 0.5
 
 
@@ -197,6 +198,19 @@ def test_an_unconfirmed_roll_back_halts() -> None:
     for part in ("1.6", "1.5", "not confirmed"):
         assert part in played.state.halted
     assert played.last.added[0].guard == "ladder"
+
+
+def test_a_roll_back_at_the_last_trial_needs_no_confirmation_trials() -> None:
+    """The floor trials repeat the same feedforward anyway."""
+    played = player({"trials": 3, "floor_trials": 2}).play("..r")
+    assert (played.last.recall_trial, played.state.confirm_left) == (0, 0)
+    assert (played.state.floor_left, played.state.purpose) == (2, Purpose.FLOOR)
+
+
+def test_a_void_that_halts_is_counted_as_void() -> None:
+    """And not as a trial that counted."""
+    state = player().play("..H").state
+    assert (state.voids, state.counted) == (1, 2)
 
 
 def test_roll_backs_reduce_the_gain_each_time() -> None:
@@ -240,7 +254,12 @@ def test_one_floor_trial_tells_no_floor() -> None:
     """A spread needs two."""
     played = player({"trials": 1, "floor_trials": 1}).play("..")
     assert "tells no repeatability floor" in played.last.sentence
-    assert "nan" not in played.last.sentence
+    two = RunState(
+        trial=9, purpose=Purpose.FLOOR, floor_left=1, floor_count=2, floor_norm=0.25, ending="done"
+    )
+    decision = played.rules.decide(two, 1.0, verdicts("."))
+    assert "repeatability floor 0.25 from 2 trials" in decision.sentence
+    assert decision.state.over == "done"
 
 
 def test_a_frozen_probe_gives_way_to_learning_trials() -> None:

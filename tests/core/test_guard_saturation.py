@@ -42,6 +42,8 @@ def test_a_share_above_the_limit_warns(make_trial: Make, make_context: Make) -> 
     assert verdict.level is Level.WARN
     for part in ("input force", "0.6", "0.5"):
         assert part in verdict.reason
+    half = Saturation().judge(make_trial(limited=mask(0.5)), make_context(), {}).verdict
+    assert half.level is Level.PASS, "at the limit is not above it"
 
 
 def test_the_daemons_cuts_count_as_well_and_once(make_trial: Make, make_context: Make) -> None:
@@ -70,9 +72,10 @@ def test_a_rising_share_without_a_falling_error_freezes(
     assert judge_series(series, Saturation()) == [Level.PASS] * 5 + [Level.FREEZE]
     memory = {"shares": [s for s, _ in series[:5]], "norms": [1.0] * 5}
     guard, context = Saturation(), make_context(error_norm=1.1)
-    reason = guard.judge(make_trial(limited=mask(0.2)), context, memory).verdict.reason
+    verdict = guard.judge(make_trial(limited=mask(0.2)), context, memory).verdict
     for part in ("5 trials in a row", "0.1 to 0.2", "limit of the rise 0.05", "1 to 1.1"):
-        assert part in reason
+        assert part in verdict.reason
+    assert (verdict.value, verdict.limit) == (pytest.approx(0.1), 0.05)
 
 
 def test_a_rising_share_with_a_falling_error_passes(judge_series: Any) -> None:

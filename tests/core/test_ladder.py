@@ -15,6 +15,7 @@ STATE = RunState(
     trial=20,
     counted=20,
     updates=15,
+    averaged=1,
     best_trial=11,
     best_norm=0.4,
     last_good_trial=17,
@@ -36,13 +37,14 @@ def test_the_strongest_verdict_is_the_first_of_the_highest_level() -> None:
 def test_voids_repeat_until_one_too_many_halts() -> None:
     """Three voids in a row are repeated, the fourth halts; the sentence counts them."""
     verdict = Verdict("integrity", Level.WARN, "3 of 9 samples missing", 3, 0, void=True)
-    state = RunState()
+    state = RunState(voids=5)
     for k in range(1, 4):
         decision = ladder.void(state, verdict, LadderSettings())
         assert decision.action is Act.REPEAT
         assert f"void {k} in a row, at most 3" in decision.sentence
         assert "3 of 9 samples missing" in decision.sentence
         state = decision.state
+        assert (state.voids_in_row, state.voids) == (k, 5 + k)
     decision = ladder.void(state, verdict, LadderSettings())
     assert decision.action is Act.HALT
     assert "4 void trials in a row, the limit is 3" in decision.state.halted
@@ -56,7 +58,7 @@ def test_a_roll_back_returns_to_the_best_with_less_gain() -> None:
     state = decision.state
     assert (decision.action, decision.recall_trial) == (Act.RECALL, 11)
     assert (state.gain, state.roll_backs, state.purpose) == (0.5, 1, Purpose.CONFIRM)
-    assert (state.confirm_left, state.confirm_norm) == (2, 0.4)
+    assert (state.confirm_left, state.confirm_norm, state.averaged) == (2, 0.4, 0)
     for part in ("trial 20", "trial 11", "0.4", "0.5", "1 of at most 3", "the norm is 2"):
         assert part in decision.sentence
 
@@ -90,6 +92,8 @@ def test_targets_of_a_roll_back(target: str | int, expected: tuple[int, float]) 
 def test_without_a_good_trial_the_best_stands_in() -> None:
     """Every trial had a complaint."""
     assert ladder.target_of(replace(STATE, last_good_trial=-1), "last_good") == (11, 0.4)
+    first = replace(STATE, last_good_trial=0, last_good_norm=2.0)
+    assert ladder.target_of(first, "last_good") == (0, 2.0), "the very first may be the last good"
 
 
 def test_one_roll_back_too_many_halts() -> None:
@@ -99,12 +103,17 @@ def test_one_roll_back_too_many_halts() -> None:
     assert decision.state.roll_backs == 3
     for part in ("one more roll back after 3, the limit is 3", "the norm is 2"):
         assert part in decision.state.halted
+    (added,) = decision.added
+    assert (added.value, added.limit) == (4.0, 3.0)
 
 
 def test_nowhere_to_roll_back_to_halts() -> None:
     """No trial ever stood as best."""
     state = replace(STATE, best_trial=-1, best_norm=math.inf)
-    assert ladder.roll_back(state, GROWTH, LadderSettings()).action is Act.HALT
+    decision = ladder.roll_back(state, GROWTH, LadderSettings())
+    assert decision.action is Act.HALT
+    assert "no trial to roll back to among 20" in decision.state.halted
+    assert (decision.added[0].value, decision.added[0].limit) == (0.0, 1.0)
 
 
 def test_without_confirmation_learning_goes_on_at_once() -> None:
@@ -113,24 +122,35 @@ def test_without_confirmation_learning_goes_on_at_once() -> None:
     assert decision.state.purpose is Purpose.LEARN
 
 
-@pytest.mark.parametrize(("norm", "halts"), [(0.6, False), (0.61, True), (math.inf, True)])
+@pytest.mark.parametrize(("norm", "halts"), [(0.75, False), (0.76, True), (math.inf, True)])
 def test_a_confirmation_must_come_back(norm: float, halts: bool) -> None:
     """Within one and a half times the norm returned to, else a person is needed."""
-    state = replace(STATE, purpose=Purpose.CONFIRM, confirm_left=2, confirm_norm=0.4)
+    state = replace(STATE, purpose=Purpose.CONFIRM, confirm_left=2, confirm_norm=0.5, stall=4)
     passed = Verdict("", Level.PASS)
     decision = ladder.unconfirmed(state, norm, passed, LadderSettings())
     assert (decision is not None) is halts
     if decision is not None:
-        assert "the limit is 0.6" in decision.state.halted
-        assert (decision.state.purpose, decision.state.confirm_left) == (Purpose.LEARN, 0)
+        after = decision.state
+        assert "the limit is 0.75" in after.halted
+        assert (after.purpose, after.confirm_left) == (Purpose.LEARN, 0)
+        assert (after.best_trial, after.best_norm, after.stall, after.stall_norm) == (
+            20,
+            norm,
+            0,
+            norm,
+        )
+        assert (after.last_good_trial, after.last_good_norm) == (-1, math.inf)
+        (added,) = decision.added
+        assert (added.value, added.limit) == (norm, 0.75)
 
 
 def test_a_roll_back_wanted_while_confirming_halts() -> None:
     """Going back once more to the same place cannot help."""
     state = replace(STATE, purpose=Purpose.CONFIRM, confirm_left=2, confirm_norm=0.4)
-    decision = ladder.unconfirmed(state, 0.4, GROWTH, LadderSettings())
+    decision = ladder.unconfirmed(state, 0.6000000000000001, GROWTH, LadderSettings())
     assert decision is not None
     assert "did not help" in decision.state.halted
+    assert decision.state.best_trial == 11, "the error came back, so the books still hold"
 
 
 def test_a_guards_freeze_ends_after_clean_trials_in_a_row() -> None:
@@ -143,6 +163,12 @@ def test_a_guards_freeze_ends_after_clean_trials_in_a_row() -> None:
         assert not state.learning
     state = ladder.count_clean(state, True, settings)
     assert (state.learning, state.frozen_by, state.clean_in_row) == (True, "", 0)
+
+
+def test_one_clean_trial_may_be_enough() -> None:
+    """resume_after_trials = 1."""
+    state = replace(STATE, learning=False, frozen_by="saturation")
+    assert ladder.count_clean(state, True, LadderSettings(resume_after_trials=1)).learning
 
 
 @pytest.mark.parametrize(

@@ -47,7 +47,7 @@ class Rules:
             failed = ladder.unconfirmed(state, norm, worst, self.ladder)
             if failed is not None:
                 return failed
-        held = not learning and state.frozen_by == ladder.OPERATOR
+        held = state.frozen_by == ladder.OPERATOR
         if worst.level is Level.ROLL_BACK and state.updates > 0 and not held:
             decision = ladder.roll_back(state, worst, self.ladder)
             # Only the count can end a run here: it has just been taken away from this trial.

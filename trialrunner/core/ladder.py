@@ -76,8 +76,7 @@ def void(state: RunState, verdict: Verdict, settings: LadderSettings) -> Decisio
 
 def freeze(state: RunState, verdict: Verdict) -> RunState:
     """Learning off. An operator's freeze stays the operator's."""
-    held = not state.learning and state.frozen_by == OPERATOR
-    by = OPERATOR if held else verdict.guard
+    by = OPERATOR if state.frozen_by == OPERATOR else verdict.guard
     return replace(state, learning=False, frozen_by=by, clean_in_row=0)
 
 

@@ -61,7 +61,7 @@ class Flight:
         self._sent_crc = 0
         self._ordered_tick: int | None = None
         self._start_tries = 0
-        self._seen_count = -1
+        self._seen = (-1, -1)
         self._started_utc = ""
         self._finished_ns: int | None = None
         self._collected: Collected | None = None
@@ -107,12 +107,12 @@ class Flight:
         """A running rig whose sample count stands still has stopped."""
         talk = self._line.talk
         beat = talk.heartbeat
-        running = beat is not None and beat.state == RigState.RUNNING
-        count = beat.count if beat is not None and running else -1
-        if running and 0 <= count == self._seen_count:
-            self._on_still(f"the rig runs but took no sample after sample {count}")
-            return
-        self._seen_count = count
+        if beat is not None and beat.state == RigState.RUNNING and beat.tick != self._seen[1]:
+            # Judged only on a new heartbeat: a rig that says nothing at all is silent, not still.
+            if beat.count == self._seen[0]:
+                self._on_still(f"the rig runs but took no sample after sample {beat.count}")
+                return
+            self._seen = (beat.count, beat.tick)
         period_s = 0.0
         if talk.greeted is not None:
             period_s = talk.greeted.greeting.period_ticks / talk.greeted.greeting.tick_hz

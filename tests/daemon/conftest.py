@@ -101,12 +101,27 @@ class LinePlant:
 class World:
     """Runs daemon and rig against each other until something is the case."""
 
-    def __init__(self, folder, *, n_samples=100, trials=8, start="daemon", faults=(), seed=0,
-                 options=None, overrides=(), plant=None, record="run.trialrecord"):
+    def __init__(
+        self,
+        folder,
+        *,
+        n_samples=100,
+        trials=8,
+        start="daemon",
+        faults=(),
+        seed=0,
+        options=None,
+        overrides=(),
+        plant=None,
+        record="run.trialrecord",
+    ):
         self.clock = ManualClock()
-        text = CONFIG.format(record=folder / record, n_samples=n_samples, trials=trials, start=start)
+        text = CONFIG.format(
+            record=folder / record, n_samples=n_samples, trials=trials, start=start
+        )
         self.config = load_text(text, overrides, "bench.toml")
-        self.options = options or RigOptions(rig_starts=start == "rig", seed=seed)
+        # Small chunks, so that a trial takes several turns and things can happen in its middle.
+        self.options = options or RigOptions(rig_starts=start == "rig", seed=seed, chunk=20)
         self.faults, self.seed = tuple(faults), seed
         self.plant = plant or LinePlant(seed)
         self.published, self.logged = [], []
@@ -118,8 +133,11 @@ class World:
         self.crashes = 0
         sessions = iter(range(1000 * (seed + 1), 10**9))
         self.observer = Observer(
-            run="bench", record=str(self.config.record_path), link_url="memory://rig",
-            trials=trials, clock=self.clock,
+            run="bench",
+            record=str(self.config.record_path),
+            link_url="memory://rig",
+            trials=trials,
+            clock=self.clock,
             publish=lambda topic, values: self.published.append((topic, dict(values))),
             log=lambda level, event, **values: self.logged.append((level, event, values)),
         )
@@ -148,7 +166,11 @@ class World:
 
     def boot_rig(self):
         self.rig = Responder(
-            self.plant, self.options, FaultScript(self.faults, self.seed), 131072, 65536,
+            self.plant,
+            self.options,
+            FaultScript(self.faults, self.seed),
+            131072,
+            65536,
             self.clock.now_ns(),
         )
 
@@ -199,6 +221,8 @@ class World:
         for _ in range(turns):
             if condition():
                 return
+            if self.session.finished:
+                break
             self.turn()
         pytest.fail(
             f"never happened: cycle {self.session.cycle}, trial {self.session.state.trial}, "
@@ -245,5 +269,3 @@ def world(tmp_path):
     yield make
     for one in made:
         one.close()
-
-

@@ -143,8 +143,10 @@ class TrialTalk:
 
     @property
     def wants_clock(self) -> bool:
-        """Armed and not yet started: the clock burst goes on."""
-        return self._wanted is not None and self._armed is not None and not self._started
+        """Armed, to be started by us, and not yet started: the clock burst goes on."""
+        if self._wanted is None or self._armed is None or self._started:
+            return False
+        return self._wanted[1] is StartMode.DAEMON
 
     # -- preparing --------------------------------------------------------------------------
 
@@ -182,7 +184,11 @@ class TrialTalk:
             self._arm_sent = False
         elif isinstance(answer, Armed):
             self._armed = answer
-            self._around.begin_clock_burst()
+            if self._wanted[1] is StartMode.RIG:
+                # It may start at any moment, and no tick has to be ordered.
+                self.clock_ready()
+            else:
+                self._around.begin_clock_burst()
         else:
             self._wanted = None
             self._around.emit(_refusal("Arm", answer))
@@ -233,7 +239,7 @@ class TrialTalk:
 
     def on_finished(self, message: Finished) -> None:
         collector = self._collector
-        if collector is None or message.trial != collector.trial or self._armed is None:
+        if collector is None or message.trial != collector.trial:
             return
         first_time = collector.finished is None
         collector.finished = message

@@ -77,6 +77,9 @@ TABLE: dict[tuple[State, Event], tuple[State, tuple[Action, ...]]] = {
     (_S.IDLE, _E.END): (_S.IDLE, (_A.FINISH,)),
     (_S.LOADING, _E.GREETED): (_S.LOADING, (_A.LOAD,)),
     (_S.LOADING, _E.ARMED): (_S.ARMED, (_A.ORDER_START,)),
+    # A rig that starts itself may be quicker than its own answer to the arming.
+    (_S.LOADING, _E.STARTED): (_S.RUNNING, ()),
+    (_S.LOADING, _E.FINISHED): (_S.SETTLING, ()),
     (_S.LOADING, _E.MISSED): (_S.UPDATING, (_A.PROCESS_VOID,)),
     (_S.LOADING, _E.LOST): (_S.LOADING, (_A.RECONNECT,)),
     (_S.LOADING, _E.PAUSE): (_S.LOADING, (_A.DISARM,)),

@@ -59,11 +59,11 @@ def test_a_healthy_rig_with_a_tenth_of_scatter_passes(judge: Any, seed: int) -> 
 
 def test_growth_after_convergence_rolls_back_at_the_second_trial_above(judge: Any) -> None:
     """The level is 0.5, the limit 1.5 times it: the second trial in a row above it fires."""
-    verdicts = judge([10, 3, 1, 0.5, 0.5, 0.4, 0.4, 0.8, 1.6], ErrorGrowth())
-    assert fired(verdicts) == [(8, Level.ROLL_BACK)]
+    verdicts = judge([10, 3, 1, 0.5, 0.5, 0.5, 0.8, 0.9], ErrorGrowth())
+    assert fired(verdicts) == [(7, Level.ROLL_BACK)]
     verdict = verdicts[-1]
-    assert (verdict.value, verdict.limit) == (pytest.approx(3.2), 1.5)
-    for part in ("1.6", "3.2 times", "0.5", "1.5 times", "2 trials in a row"):
+    assert (verdict.value, verdict.limit) == (pytest.approx(1.8), 1.5)
+    for part in ("norm is 0.9", "1.8 times", "0.5", "1.5 times", "2 trials in a row"):
         assert part in verdict.reason
 
 
@@ -73,12 +73,25 @@ def test_one_outlier_is_forgiven(judge: Any) -> None:
 
 
 def test_a_jump_fires_at_once(judge: Any) -> None:
-    """More than four times the level does not wait for a second trial."""
-    assert fired(judge([1, 1, 1, 1, 4.0], ErrorGrowth())) == []
-    verdicts = judge([1, 1, 1, 1, 4.5], ErrorGrowth())
+    """More than twice the level does not wait for a second trial."""
+    assert fired(judge([1, 1, 1, 1, 2.0], ErrorGrowth())) == []
+    verdicts = judge([1, 1, 1, 1, 2.5], ErrorGrowth())
     assert fired(verdicts) == [(4, Level.ROLL_BACK)]
-    assert "4.5 times" in verdicts[-1].reason
-    assert "limit is 4 times" in verdicts[-1].reason
+    assert "2.5 times" in verdicts[-1].reason
+    assert "limit is 2 times" in verdicts[-1].reason
+
+
+def test_a_larger_ratio_is_not_undercut_by_the_jump(judge: Any) -> None:
+    """Asking for a ratio of three means three."""
+    assert fired(judge([1, 1, 1, 1, 2.9, 2.9, 2.9], ErrorGrowth(ratio=3.0))) == []
+    assert fired(judge([1, 1, 1, 1, 3.1], ErrorGrowth(ratio=3.0))) == [(4, Level.ROLL_BACK)]
+
+
+def test_growth_is_seen_while_the_error_has_just_stopped_falling(judge: Any) -> None:
+    """The level follows a falling error closely enough to catch what comes right after."""
+    assert fired(judge([2.35, 1.6, 1.13, 0.87, 0.90, 1.26, 2.01], ErrorGrowth())) == [
+        (6, Level.ROLL_BACK)
+    ]
 
 
 def test_one_lucky_trial_is_not_the_level(judge: Any) -> None:

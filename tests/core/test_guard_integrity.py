@@ -92,6 +92,18 @@ def test_a_single_sample_spike_voids(
     assert_void(judge(trial, make_context()), "spike", f"sample {sample}")
 
 
+def test_a_spike_smaller_than_the_motion_of_a_sample_is_found(
+    make_trial: Make, make_context: Make
+) -> None:
+    """At full speed the axis moves 0.2 mm a sample; a spike of as much stands out all the same."""
+    trial = make_trial()
+    assert trial.reference[121, 0] - trial.reference[120, 0] > 0.19
+    trial = with_output(trial, slice(None), np.round(trial.reference[:, 0], 2))
+    assert judge(trial, make_context()).verdict.level is Level.PASS
+    trial = with_output(trial, 120, trial.output[120, 0] + 0.2)
+    assert_void(judge(trial, make_context()), "spike", "sample 120")
+
+
 def test_several_spikes_do_not_hide_each_other(make_trial: Make, make_context: Make) -> None:
     """A burst of spikes is found although each is another's neighbour."""
     trial = make_trial()
@@ -174,7 +186,15 @@ def test_a_broken_auxiliary_channel_is_only_warned_of(make_trial: Make, make_con
 @pytest.mark.parametrize("seed", range(5))
 @pytest.mark.parametrize(
     "kind",
-    ["triangle", "step", "coarse encoder", "vibration on the move", "bang-bang", "held samples"],
+    [
+        "triangle",
+        "corner",
+        "step",
+        "coarse encoder",
+        "vibration on the move",
+        "bang-bang",
+        "held samples",
+    ],
 )
 def test_normal_moves_have_no_spikes(kind: str, seed: int) -> None:
     """Sharp but healthy signals: nothing stands out for one sample."""
@@ -184,6 +204,7 @@ def test_normal_moves_have_no_spikes(kind: str, seed: int) -> None:
     moving = (n > 700) & (n < 1300)
     signals = {
         "triangle": 0.3 * np.abs((n % 200) - 100.0),
+        "corner": np.where(n < 1000, 0.5 * n, 500.0 - 0.2 * (n - 1000)),
         "step": np.where(n > 900, 30.0, 0.0) + 0.01 * rng.standard_normal(2000),
         "coarse encoder": np.round(smooth + 0.2 * rng.standard_normal(2000)),
         "vibration on the move": moving * rng.standard_normal(2000),

@@ -92,18 +92,20 @@ def find_spike(output: Array, factor: float) -> Peak | None:
     """The largest sample that leaves its neighbours and comes back at once, if out of proportion.
 
     Its height is the smaller of the two opposite changes around it, less the larger of the next
-    changes outwards; so a step, a reversal at speed and a vibration have none. It is compared with
-    `factor` times the largest of: the sensor's step, the robust scale (MAD) of the second
-    differences of the trial, and the same just before and just after. `output` (n_samples,).
+    changes outwards, all against the slope between the samples two away; so a step, a corner, a
+    reversal at speed and a vibration have none. It is compared with `factor` times the largest of:
+    the sensor's step, the robust scale (MAD) of the second differences of the trial, and the same
+    just before and just after. `output` (n_samples,).
     """
     if output.size < 5:
         return None
     change = np.diff(output)
     roughness = np.abs(np.diff(change))
-    size = np.abs(change)
-    height = np.minimum(size[1:-2], size[2:-1]) - np.maximum(size[:-3], size[3:])
-    turns = np.signbit(change[1:-2]) != np.signbit(change[2:-1])
-    height = np.where(turns, height, 0.0)
+    slope = 0.25 * (output[4:] - output[:-4])
+    before, after = change[1:-2] - slope, change[2:-1] - slope
+    around = np.maximum(np.abs(change[:-3] - slope), np.abs(change[3:] - slope))
+    height = np.minimum(np.abs(before), np.abs(after)) - around
+    height = np.where(np.signbit(before) != np.signbit(after), height, 0.0)
     sample = roughness[:: 1 + roughness.size // MEDIAN_SAMPLES]
     floor = max(resolution(output), MAD_TO_SIGMA * float(np.median(sample)))
     suspects = np.flatnonzero(height > factor * floor)

@@ -250,6 +250,14 @@ def test_an_operator_takes_over_a_guards_freeze() -> None:
     assert (rig.state.frozen_by, rig.state.clean_in_row) == ("operator", 0)
 
 
+def test_a_guard_that_is_off_is_not_asked() -> None:
+    """It leaves no verdict at all."""
+    rig = bench(guards={"divergence": Divergence(norm_limit=0.1, enabled=False)})
+    outcome = rig.play()
+    assert outcome.action == "learn"
+    assert "divergence" not in {verdict.guard for verdict in outcome.verdicts}
+
+
 def test_learning_guards_see_no_void_trial() -> None:
     """Only admission speaks about a trial that does not count."""
     names = {verdict.guard for verdict in bench().play(**VOID).verdicts}

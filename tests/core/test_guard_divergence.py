@@ -4,6 +4,7 @@ import math
 from collections.abc import Callable
 from typing import Any
 
+import numpy as np
 import pytest
 
 from trialrunner.core.errors import SettingError
@@ -53,6 +54,17 @@ def test_a_peak_above_its_limit_fires(make_trial: Make, make_context: Make) -> N
     assert guard.judge(trial, make_context(), {}).verdict.level is Level.PASS
 
 
+def test_exactly_at_a_limit_is_within_it(make_trial: Make, make_context: Make) -> None:
+    """Norm, ratio and peak alike."""
+    trial = make_trial()
+    peak = float(np.max(np.abs(trial.error)))
+    guard = Divergence(norm_limit=2.0, peak_limits={"x": peak})
+    context = make_context(error_norm=2.0, first_norm=0.4)
+    assert guard.judge(trial, context, {}).verdict.level is Level.PASS
+    tighter = Divergence(peak_limits={"x": 0.999 * peak})
+    assert tighter.judge(trial, context, {}).verdict.level is Level.HALT
+
+
 def test_a_probe_is_only_held_to_the_absolute_limits(make_trial: Make, make_context: Make) -> None:
     """An experiment of the law may exceed the first trial, never a stated limit."""
     probe = make_trial(purpose=Purpose.PROBE)
@@ -66,6 +78,8 @@ def test_a_first_trial_without_error_sets_no_limit(make_trial: Make, make_contex
     """A multiple of zero would forbid everything."""
     context = make_context(error_norm=0.1, first_norm=0.0)
     assert Divergence().judge(make_trial(), context, {}).verdict.level is Level.PASS
+    context = make_context(error_norm=5.1, first_norm=1.0)
+    assert Divergence().judge(make_trial(), context, {}).verdict.level is Level.HALT
 
 
 def test_a_limit_for_an_unknown_output_is_refused(make_context: Make) -> None:

@@ -81,6 +81,20 @@ def test_a_reading_out_of_range_voids(
     assert_void(result, word, "sample 200", "mm")
 
 
+def test_a_reading_at_the_end_of_the_range_is_believed(
+    make_trial: Make, make_context: Make, move: Any
+) -> None:
+    """Only beyond it is outside."""
+    channel = replace(make_context().outputs[0], low=0.0, high=10.0)
+    context = make_context(outputs=(channel,))
+    assert judge(make_trial(output=move.copy()), context).verdict.level is Level.PASS
+
+
+def test_a_trial_of_no_samples_voids(make_trial: Make, make_context: Make) -> None:
+    """A count of 0 is a count, not "all"."""
+    assert_void(judge(make_trial(count=0), make_context()), "took 0 samples")
+
+
 @pytest.mark.parametrize("sample", [2, 40, 120, 200, 397])
 @pytest.mark.parametrize("sign", [-1.0, 1.0])
 def test_a_single_sample_spike_voids(
@@ -176,11 +190,32 @@ def test_a_rig_at_rest_without_feedforward_is_warned_of_not_voided(
     assert_void(judge(replace(still, feedforward=np.full((400, 1), 0.1)), make_context()), "stuck")
 
 
+def test_standing_still_is_right_where_the_reference_does(
+    make_trial: Make, make_context: Make
+) -> None:
+    """A constant reference asks for no motion, with or without feedforward."""
+    flat = np.zeros((400, 1))
+    for feedforward in (flat, flat + 0.1):
+        trial = make_trial(reference=flat, output=flat, feedforward=feedforward)
+        assert judge(trial, make_context()).verdict.level is Level.PASS
+
+
+def test_the_check_for_stuck_sensors_can_be_switched_off(
+    make_trial: Make, make_context: Make
+) -> None:
+    """stuck_share = 1: neither voided nor warned of, as for a rig with a very long dead time."""
+    for feedforward in (np.zeros((400, 1)), np.full((400, 1), 0.1)):
+        trial = make_trial(output=np.zeros((400, 1)), feedforward=feedforward)
+        result = judge(trial, make_context(), stuck_share=1.0)
+        assert result.verdict.level is Level.PASS
+
+
 def test_a_broken_auxiliary_channel_is_only_warned_of(make_trial: Make, make_context: Make) -> None:
     """Auxiliary channels do not teach, so they cannot void."""
     verdict = judge(make_trial(auxiliary=np.full((400, 1), np.nan)), make_context()).verdict
     assert (verdict.level, verdict.void) == (Level.WARN, False)
     assert "400" in verdict.reason
+    assert (verdict.value, verdict.limit) == (400.0, 0.0)
 
 
 @pytest.mark.parametrize("seed", range(5))

@@ -14,7 +14,7 @@ from trialrunner.core.trial import Level
 Make = Callable[..., Any]
 
 
-@pytest.mark.parametrize("away", [0.0, 0.19, -0.19])
+@pytest.mark.parametrize("away", [0.0, 0.2, -0.2])
 def test_a_start_within_tolerance_passes(make_trial: Make, make_context: Make, away: float) -> None:
     """The tolerance is the channel's own, to either side."""
     trial = make_trial(start_state=np.array([away]))
@@ -39,6 +39,8 @@ def test_the_start_is_measured_from_the_reference(make_trial: Make, make_context
     assert StartState().judge(shifted, make_context(), {}).verdict.void
     there = replace(shifted, start_state=np.array([10.0]))
     assert not StartState().judge(there, make_context(), {}).verdict.void
+    steep = replace(there, reference=there.reference + np.arange(400)[:, np.newaxis])
+    assert not StartState().judge(steep, make_context(), {}).verdict.void, "sample 0 counts"
 
 
 @pytest.mark.parametrize(("lateness_s", "word"), [(0.002, "late"), (-0.002, "early")])
@@ -61,7 +63,7 @@ def test_an_unknown_lateness_voids(make_trial: Make, make_context: Make) -> None
     assert verdict.value == math.inf, "the record keeps no NaN"
 
 
-@pytest.mark.parametrize("lateness_s", [0.0, 0.001, -0.001])
+@pytest.mark.parametrize("lateness_s", [0.0, 0.001, -0.001, 0.0015])
 def test_a_start_at_the_next_sample_passes(
     make_trial: Make, make_context: Make, lateness_s: float
 ) -> None:

@@ -26,6 +26,7 @@ class SerialLink(ByteLink):
     def __init__(self, url: str, clock: Clock = time.monotonic) -> None:
         path, baud = parse_serial_url(url)
         self._port = _open_port(url, path, baud)
+        _end_of_file_means_gone(self._port.fileno())
         super().__init__(url, self._port.fileno(), clock)
         self._low_latency = _ask_low_latency(self._port)
         # A delimiter ends whatever half frame the other end has from an earlier time.
@@ -66,6 +67,16 @@ def _open_port(url: str, path: str, baud: int) -> serial.Serial:
     except (serial.SerialException, OSError, ValueError) as error:
         raise _in_words(url, path, error) from None
     return port
+
+
+def _end_of_file_means_gone(fd: int) -> None:
+    """pyserial sets VMIN = 0, and then an idle line reads as an end of file, like an unplugged one.
+
+    With VMIN = 1 an idle non-blocking read raises BlockingIOError.
+    """
+    attributes = termios.tcgetattr(fd)
+    attributes[6][termios.VMIN], attributes[6][termios.VTIME] = 1, 0
+    termios.tcsetattr(fd, termios.TCSANOW, attributes)
 
 
 def _in_words(url: str, path: str, error: Exception) -> LinkError:

@@ -200,7 +200,7 @@ class Processes:
                 alive = daemon.poll() is None
                 while socket.poll(100 if alive else 0):
                     topic, _, body = socket.recv().partition(b"\0")
-                    yield Progress(topic.decode(), json.loads(body))
+                    yield Progress(topic.decode(), json.loads(body)["data"])
                 if not alive:
                     return
 

@@ -1,0 +1,124 @@
+"""One belt-driven axis: motor, belt, load, friction, cogging, its own feedback loop; pure."""
+
+import math
+from collections import deque
+from dataclasses import dataclass
+from random import Random
+
+from mock_rig.friction import LuGre
+from mock_rig.plant import Disturbance
+
+
+@dataclass(frozen=True)
+class AxisParameters:
+    motor_kg: float
+    load_kg: float
+    belt_n_per_m: float
+    belt_ns_per_m: float
+    friction: LuGre
+    cogging_n: float
+    cogging_pitch_m: float
+    gain_n_per_m: float
+    """Feedback from the motor's position."""
+    damping_ns_per_m: float
+    """Feedback from the filtered derivative of the tracking error."""
+    derivative_s: float
+    """Time constant of that filter."""
+    force_limit_n: float
+    encoder_m: float
+    """Step of both encoders."""
+    process_noise_n: float
+    """Standard deviation of a force that differs from trial to trial, slowly varying."""
+    start_spread_m: float
+
+    def resonance_hz(self) -> float:
+        """Of motor and load against each other: sqrt(k (m1 + m2) / (m1 m2)) / 2 pi."""
+        total = self.motor_kg + self.load_kg
+        squared = self.belt_n_per_m * total / (self.motor_kg * self.load_kg)
+        return math.sqrt(squared) / (2 * math.pi)
+
+
+NOISE_S = 0.05
+"""Correlation time of the process noise."""
+
+RESONANCE_HZ, RESONANCE_DAMPING = 17.0, 0.02
+"""Of the resonance that a fault adds to the response to the feedforward."""
+
+
+class Axis:
+    """State of one axis; `period_s` is split into `substeps` of fixed length."""
+
+    def __init__(self, parameters: AxisParameters, period_s: float, substeps: int) -> None:
+        self.parameters = parameters
+        self._period_s = period_s
+        self._step_s = period_s / substeps
+        self.substeps = substeps
+        self.begin(0.0, Disturbance(), Random(0))
+
+    def begin(self, start: float, disturbance: Disturbance, chance: Random) -> None:
+        """Stand at a start, up to its spread; loops and filters start afresh."""
+        p = self.parameters
+        self._chance = chance
+        spread = p.start_spread_m * disturbance.noise
+        self.motor = self.load = start + chance.gauss(0.0, spread)
+        self.motor_v = self.load_v = 0.0
+        self._bristles = 0.0
+        self._friction = p.friction.scaled(disturbance.friction)
+        self._gain = disturbance.gain
+        self._limit = p.force_limit_n * disturbance.load_limit
+        self._noise_n = p.process_noise_n * disturbance.noise
+        self._noise = chance.gauss(0.0, self._noise_n)
+        self._waiting = deque([0.0] * disturbance.extra_delay)
+        self._resonance = disturbance.resonance
+        self._ring = self._ring_v = 0.0
+        self._filtered = self._last_error = 0.0
+        self._force = 0.0
+        self.limited = False
+
+    def measured(self) -> float:
+        """Position of the load as its encoder tells it."""
+        step = self.parameters.encoder_m
+        return round(self.load / step) * step
+
+    def command(self, feedforward: float, reference: float) -> None:
+        """Once a sample: the controller's force for the next period (one sample of delay)."""
+        p = self.parameters
+        self._waiting.append(feedforward)
+        effect = self._gain * self._waiting.popleft()
+        effect += self._ringing(effect)
+        error = reference - round(self.motor / p.encoder_m) * p.encoder_m
+        share = self._period_s / (p.derivative_s + self._period_s)
+        rate = (error - self._last_error) / self._period_s
+        self._filtered += share * (rate - self._filtered)
+        self._last_error = error
+        wanted = effect + p.gain_n_per_m * error + p.damping_ns_per_m * self._filtered
+        self._force = min(max(wanted, -self._limit), self._limit)
+        self.limited = self._force != wanted
+        keep = math.exp(-self._period_s / NOISE_S)
+        fresh = self._noise_n * math.sqrt(1 - keep * keep)
+        self._noise = keep * self._noise + self._chance.gauss(0.0, fresh)
+
+    def _ringing(self, effect: float) -> float:
+        """A lightly damped oscillator driven by the feedforward, while that fault is on."""
+        if not self._resonance:
+            return 0.0
+        omega = 2 * math.pi * RESONANCE_HZ
+        push = omega * omega * (effect - self._ring) - 2 * RESONANCE_DAMPING * omega * self._ring_v
+        self._ring_v += push * self._period_s
+        self._ring += self._ring_v * self._period_s
+        return self._resonance * self._ring
+
+    def move(self, outside_n: float) -> float:
+        """One substep under a force on the load from outside; the belt's force on the load."""
+        p, h = self.parameters, self._step_s
+        belt = p.belt_n_per_m * (self.motor - self.load) + p.belt_ns_per_m * (
+            self.motor_v - self.load_v
+        )
+        self._bristles, friction = self._friction.step(self._bristles, self.motor_v, h)
+        cogging = p.cogging_n * math.sin(2 * math.pi * self.motor / p.cogging_pitch_m)
+        force = self._force + self._noise - friction - cogging - belt
+        self.motor_v += h * force / p.motor_kg
+        self.load_v += h * (belt + outside_n) / p.load_kg
+        self.motor += h * self.motor_v
+        self.load += h * self.load_v
+        return belt

@@ -1,0 +1,87 @@
+"""A small thermal-cycling chamber: first order plus delay under a PI loop; slow; pure."""
+
+from collections import deque
+from collections.abc import Sequence
+from random import Random
+
+from mock_rig.plant import TICK_HZ, ChannelInfo, Disturbance
+
+PERIOD_TICKS = 5 * TICK_HZ
+GAIN_K_PER_W = 0.25
+TIME_CONSTANT_S = 400.0
+DELAY_SAMPLES = 6
+SUBSTEPS = 5
+PROPORTIONAL_W_PER_K = 12.0
+INTEGRAL_W_PER_KS = 0.02
+POWER_LIMIT_W = 400.0
+SENSOR_K = 0.01
+SENSOR_NOISE_K = 0.01
+AMBIENT_CEL = 22.0
+AMBIENT_SPREAD_K = 0.15
+POWER_NOISE_W = 2.0
+
+
+class Chamber:
+    name = "chamber"
+    period_ticks = PERIOD_TICKS
+    inject = "actuator"
+    return_s = 1800.0
+    inputs = (ChannelInfo("heater_power", "W", -300.0, 300.0, 50.0),)
+    outputs = (ChannelInfo("chamber_temperature", "Cel", -20.0, 120.0),)
+    auxiliary = (
+        ChannelInfo("power_limited", "1", 0.0, 1.0, meaning="limited"),
+        ChannelInfo("ambient_temperature", "Cel", -20.0, 60.0),
+    )
+
+    def __init__(self, seed: int) -> None:
+        self._seed = seed
+        self.begin(0, [AMBIENT_CEL], Disturbance())
+
+    def begin(
+        self, trial: int, reference0: Sequence[float], disturbance: Disturbance
+    ) -> list[float]:
+        self._chance = Random(f"{self._seed}/{self.name}/{trial}")
+        self._effect = disturbance
+        spread = AMBIENT_SPREAD_K * disturbance.noise
+        self._ambient = AMBIENT_CEL + self._chance.gauss(0.0, spread)
+        start = reference0[0] + sum(disturbance.offset[:1])
+        self._temperature = start + self._chance.gauss(0.0, 0.02 * disturbance.noise)
+        holding = (start - AMBIENT_CEL) / GAIN_K_PER_W
+        self._integral = holding
+        self._pipe = deque([holding] * DELAY_SAMPLES)
+        self._waiting = deque([0.0] * disturbance.extra_delay)
+        self._power_noise = 0.0
+        return [self._measured()]
+
+    def _measured(self) -> float:
+        noise = self._chance.gauss(0.0, SENSOR_NOISE_K * self._effect.noise)
+        return round((self._temperature + noise) / SENSOR_K) * SENSOR_K
+
+    def step(
+        self, feedforward: Sequence[float], reference: Sequence[float]
+    ) -> tuple[list[float], list[float]]:
+        measured = self._measured()
+        limited = self._command(feedforward[0], reference[0] - measured)
+        self._move(self._pipe.popleft())
+        return [measured], [float(limited), self._ambient]
+
+    def _command(self, feedforward: float, error: float) -> bool:
+        """The PI loop's power goes into the pipe; true while it is limited."""
+        self._waiting.append(feedforward)
+        effect = self._effect.gain * self._waiting.popleft()
+        wanted = effect + PROPORTIONAL_W_PER_K * error + self._integral
+        limit = POWER_LIMIT_W * self._effect.load_limit
+        power = min(max(wanted, -limit), limit)
+        if power == wanted:
+            self._integral += INTEGRAL_W_PER_KS * error * PERIOD_TICKS / TICK_HZ
+        fresh = self._chance.gauss(0.0, POWER_NOISE_W * self._effect.noise)
+        self._power_noise = 0.8 * self._power_noise + 0.6 * fresh
+        self._pipe.append(power + self._power_noise)
+        return power != wanted
+
+    def _move(self, power: float) -> None:
+        step_s = PERIOD_TICKS / TICK_HZ / SUBSTEPS
+        loss = TIME_CONSTANT_S * self._effect.friction
+        for _ in range(SUBSTEPS):
+            settled = self._ambient + GAIN_K_PER_W * power
+            self._temperature += step_s / loss * (settled - self._temperature)

@@ -18,7 +18,9 @@ import zmq
 from trialrunner.locks import Busy, hold_lock
 from trialrunner.runtime_dir import MAX_IPC_PATH_BYTES, is_listening, make_private_dir
 
-_LOOPBACK = re.compile(r"(127(\.\d{1,3}){3}|localhost|\[::1\]):(\d{1,5}|\*)")
+_LOOPBACK = re.compile(r"(127(\.\d{1,3}){3}|localhost|\[::1\]):(?P<port>\d{1,5}|\*)")
+
+MAX_PORT = 65_535
 
 _ONLY_LOCAL = (
     "expected ipc:///path or tcp://127.0.0.1:port; anybody who reaches it can command the rig, so "
@@ -33,7 +35,11 @@ class AddressError(OSError):
 def socket_path(url: str) -> Path | None:
     """The file of an ipc address, None for loopback TCP. Raises AddressError for all others."""
     scheme, _, rest = url.partition("://")
-    if scheme == "tcp" and _LOOPBACK.fullmatch(rest):
+    loopback = _LOOPBACK.fullmatch(rest) if scheme == "tcp" else None
+    if loopback is not None:
+        if loopback["port"] != "*" and not 0 < int(loopback["port"]) <= MAX_PORT:
+            # ZeroMQ would take the number modulo 65536.
+            raise AddressError(f"{url}: expected a port from 1 to {MAX_PORT}")
         return None
     if scheme != "ipc" or not rest:
         raise AddressError(f"{url}: {_ONLY_LOCAL}")

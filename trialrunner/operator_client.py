@@ -11,6 +11,7 @@ import zmq
 from trialrunner.operator_messages import (
     MAX_ANSWER_BYTES,
     BadMessage,
+    NoAnswer,
     OperatorAnswer,
     OperatorRequest,
     parse_answer,
@@ -19,10 +20,6 @@ from trialrunner.runtime_dir import is_listening
 
 RETRY_S = 1.0
 """Without an answer for this long, the request is sent again over a new connection."""
-
-
-class NoAnswer(Exception):
-    """No daemon answered; the text names the address and says what to do."""
 
 
 class BadAddress(ValueError):

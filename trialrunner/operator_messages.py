@@ -77,6 +77,10 @@ class BadMessage(ValueError):
         self.id = id
 
 
+class NoAnswer(Exception):
+    """No daemon answered; the text names the address and says what to do."""
+
+
 @dataclass(frozen=True)
 class OperatorRequest:
     """What an operator asks for. Two with the same id are the same request, applied once."""

@@ -138,18 +138,24 @@ def _count(number: int, one: str, many: str) -> str:
 def _guards(guards: Mapping[str, Mapping[str, Any]]) -> Iterator[tuple[str, str]]:
     """Guards that are content in one line, the others with their reason, worst first."""
     noted = [name for name, found in guards.items() if found["level"] != "pass" or found["void"]]
+    texts = [
+        _guard(name, guards[name]) for name in sorted(noted, key=lambda one: _rank(guards[one]))
+    ]
     content = len(guards) - len(noted)
     if content:
-        yield "guards", f"{'all ' if not noted else ''}{content} pass"
-    for name in sorted(noted, key=lambda one: _rank(guards[one])):
-        found = guards[name]
-        level = "void" if found["void"] else found["level"]
-        label = "" if content or name != noted[0] else "guards"
-        yield label, f"{level}: {name}: {found['reason']}"
+        texts.insert(0, f"{'' if noted else 'all '}{content} pass")
+    for index, text in enumerate(texts):
+        yield "" if index else "guards", text
 
 
-def _rank(found: Mapping[str, Any]) -> int:
-    return _LEVELS.index(found["level"]) if found["level"] in _LEVELS else 0
+def _guard(name: str, found: Mapping[str, Any]) -> str:
+    words = [str(found["level"])] if found["level"] != "pass" else []
+    return f"{', '.join([*words, *['void'] * bool(found['void'])])}: {name}: {found['reason']}"
+
+
+def _rank(found: Mapping[str, Any]) -> tuple[int, bool]:
+    level = found["level"]
+    return _LEVELS.index(level) if level in _LEVELS else 0, not found["void"]
 
 
 def _link(link: Mapping[str, Any]) -> str:

@@ -13,13 +13,13 @@ from typing import Any
 import click
 
 from trialrunner.exit_codes import ExitCode
-from trialrunner.operator_client import BadAddress, NoAnswer, OperatorClient, new_id
 from trialrunner.operator_messages import (
     MAX_WHO,
     MAX_WHY,
     STATUS_FIELDS,
     VERBS,
     BadMessage,
+    NoAnswer,
     OperatorAnswer,
     OperatorRequest,
     checked_target,
@@ -91,7 +91,12 @@ def command(
     timeout_s: float,
     as_json: bool,
 ) -> int:
-    request = _request(verb, _one_line(f"{reason} {why}"), to, _one_line(who or _login_name()))
+    # ZeroMQ is loaded only to ask: --help needs none.
+    from trialrunner.operator_client import BadAddress, OperatorClient, new_id
+
+    request = _request(
+        new_id(), verb, _one_line(f"{reason} {why}"), to, _one_line(who or _login_name())
+    )
     try:
         address = _address(run_name, config, url)
         with OperatorClient(address) as client:
@@ -108,7 +113,7 @@ def command(
     return ExitCode.OK if answer.ok else ExitCode.REFUSED
 
 
-def _request(verb: str, why: str, to: str | None, who: str) -> OperatorRequest:
+def _request(id_: str, verb: str, why: str, to: str | None, who: str) -> OperatorRequest:
     """The request, or a usage error where the daemon would refuse it anyway."""
     if not why and verb != "status":
         raise click.UsageError(
@@ -126,7 +131,7 @@ def _request(verb: str, why: str, to: str | None, who: str) -> OperatorRequest:
         arguments = {"to": checked_target(to or "best")} if verb == "rollback" else {}
     except ValueError as error:
         raise click.UsageError(f"--{error}") from None
-    return OperatorRequest(id=new_id(), verb=verb, who=who, why=why, arguments=arguments)
+    return OperatorRequest(id=id_, verb=verb, who=who, why=why, arguments=arguments)
 
 
 def _one_line(text: str) -> str:

@@ -219,6 +219,8 @@ def _value(value: Any) -> str:
         return "yes" if value else "no"
     if isinstance(value, float):
         return number(value)
+    if isinstance(value, dict):
+        return f"{{{', '.join(f'{key} = {_value(one)}' for key, one in value.items())}}}"
     if isinstance(value, tuple):
         return f"[{', '.join(_value(one) for one in value)}]"
     return str(value)
@@ -231,10 +233,10 @@ def _rig_facts(config: Config, found: LinkFinding) -> Iterator[tuple[str, str]]:
     yield "period", f"{rig.period_ticks / rig.tick_hz:g} s, clock of {rig.tick_hz} Hz"
     way = "streamed" if config.trial.n_samples > rig.table_capacity else "held whole"
     yield "memory", f"{rig.table_capacity} samples of a table: this trial's are {way}"
-    kept = "all of this trial" if rig.samples_kept >= config.trial.n_samples else rig.samples_kept
-    yield "can repeat", f"{kept} of the last trial's samples" if rig.samples_kept else "nothing"
+    yield "can repeat", _kept(rig.samples_kept, config.trial.n_samples)
     yield "watchdog", f"{rig.watchdog_ms / 1000:g} s without the daemon, then its safe state"
-    yield "reference", f"owned by the {rig.reference_owner}, checksum 0x{rig.reference_crc:08x}"
+    checksum = f", checksum 0x{rig.reference_crc:08x}" if rig.reference_owner == "rig" else ""
+    yield "reference", f"owned by the {rig.reference_owner}{checksum}"
     best = found.exchange
     yield (
         "clock",
@@ -242,7 +244,14 @@ def _rig_facts(config: Config, found: LinkFinding) -> Iterator[tuple[str, str]]:
         f"{best.delay_ns / 2e6:.3g} ms{'; the clock jumps (simulator)' if rig.clock_steps else ''}",
     )
     if found.bad_frames:
-        yield "line", f"{found.bad_frames} frames were not understood; look at cable and baud rate"
+        kinds = ", ".join(f"{count} by {kind}" for kind, count in found.bad_frames.items())
+        yield "line", f"damaged frames: {kinds}; if it goes on, look at cable and baud rate"
+
+
+def _kept(samples_kept: int, n_samples: int) -> str:
+    if samples_kept >= n_samples:
+        return "any sample of the last trial"
+    return f"the last {samples_kept} samples of a trial" if samples_kept else "nothing"
 
 
 def _rig_channels(found: LinkFinding) -> RenderableType:

@@ -4,7 +4,7 @@ Nothing moves: no table is sent and nothing is armed.
 """
 
 import secrets
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
 import zmq
@@ -28,6 +28,10 @@ PATIENCE_NS = 30_000_000_000
 """A rig that answers each message and never gets done is given up."""
 
 
+STRAY = {"session", "before greeting", "stale answer", "stale pong"}
+"""Kinds of frames that were sound and only came at the wrong time."""
+
+
 class LinkCheckFailed(Exception):
     """The link opened and the rig could not be talked to; the text says what it did."""
 
@@ -45,8 +49,8 @@ class LinkFinding:
     """None where the rig disagrees."""
     exchange: Exchange
     """The clock exchange of least delay."""
-    bad_frames: int
-    """Frames and messages that were not understood."""
+    bad_frames: Mapping[str, int]
+    """Frames and messages that were damaged, by kind."""
 
 
 def try_link(
@@ -160,8 +164,13 @@ class _Check:
             disagreements=tuple(disagreements),
             limits=None if disagreements else limits_in_force(self._config, channels),
             exchange=self._best,
-            bad_frames=self._talk.errors.total(),
+            bad_frames=self._damage(),
         )
+
+    def _damage(self) -> dict[str, int]:
+        """What the line did; strays of an older session are none of its doing."""
+        counts = {**self._link.statistics().errors, **self._talk.errors}
+        return {kind: n for kind, n in counts.items() if kind not in STRAY and n}
 
 
 def _session_id() -> int:

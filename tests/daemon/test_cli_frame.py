@@ -18,6 +18,8 @@ from trialrunner.config import ConfigError, load_text
 from trialrunner.core.errors import SettingError, ShapeError
 from trialrunner.exit_codes import BY_ERROR, ExitCode, code_of
 from trialrunner.link_check import LinkCheckFailed
+from trialrunner.locks import Busy, hold_lock, link_lock_path
+from trialrunner.runtime_dir import make_private_dir, runtime_dir
 
 GOOD = """\
 [run]
@@ -147,7 +149,6 @@ def test_a_foreseen_error_is_one_message_and_its_code(
 
 def test_errors_of_later_parts_are_known_by_name() -> None:
     """Naming a class imports nothing, so the table must name classes that exist."""
-    from trialrunner.locks import Busy
     from trialrunner.record import RecordError
 
     assert code_of(Busy("x")) == ExitCode.BUSY
@@ -310,6 +311,18 @@ def test_check_of_an_absent_port_is_a_link_error(
     assert "Inputs" in out
     assert "ttyABSENT" in err
     assert "Traceback" not in err
+
+
+def test_check_leaves_a_link_alone_that_a_daemon_holds(
+    good: str, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, tmp_path: Path
+) -> None:
+    """A greeting would end the daemon's session, in the middle of a trial."""
+    monkeypatch.setenv("XDG_RUNTIME_DIR", str(tmp_path))
+    make_private_dir(runtime_dir())
+    url = "zmq+tcp://127.0.0.1:7000"
+    with hold_lock(link_lock_path(url), "the link"):
+        assert entry.run_command(["check", good]) == ExitCode.BUSY
+    assert f"the link {url} is held by another trialrunner" in capsys.readouterr().err
 
 
 def test_the_shown_peaks_are_those_of_the_difference_quotients() -> None:

@@ -92,6 +92,10 @@ class Rig:
         self.heard: list[type[Message]] = []
         self.round_trips_ns = iter([5_000_000, 2_000_000, *[9_000_000] * 100])
 
+    def stray(self, frame: bytes) -> None:
+        """Something that the daemon did not ask for."""
+        self._far.send(frame)
+
     def pause(self, _: object, at_most_ns: int) -> None:
         """Time passes here and nowhere else; the answers arrive at its end."""
         frames = self._far.receive()
@@ -149,6 +153,22 @@ def test_the_exchange_of_least_delay_is_reported(config: Config) -> None:
     """The second of these took 2 ms, the others more."""
     found, _ = check(config, good_answer)
     assert found.exchange.delay_ns == 2_000_000
+
+
+def test_frames_of_an_older_session_are_no_damage(config: Config) -> None:
+    """A rig that was left in the middle of something still talks of it."""
+    clock = ManualClock()
+    rig = Rig(clock, good_answer)
+    rig.stray(pack_frame(1, 0, encode(Bye())))
+    assert try_link(config, clock, lambda _: rig.near, rig.pause).bad_frames == {}
+
+
+def test_a_damaged_frame_is_counted_by_kind(config: Config) -> None:
+    """So that somebody looks at the cable."""
+    clock = ManualClock()
+    rig = Rig(clock, good_answer)
+    rig.stray(pack_frame(1, 0, encode(Bye()))[:-1] + b"!")
+    assert try_link(config, clock, lambda _: rig.near, rig.pause).bad_frames == {"crc": 1}
 
 
 def test_the_link_is_given_back_afterwards(config: Config) -> None:

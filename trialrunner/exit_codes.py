@@ -40,6 +40,7 @@ class ExitCode(IntEnum):
 BY_ERROR: dict[str, ExitCode] = {
     "ConfigError": ExitCode.CONFIG,
     "ChannelFileError": ExitCode.CONFIG,
+    "AddressError": ExitCode.CONFIG,
     "CoreError": ExitCode.CONFIG,
     "RehearsalError": ExitCode.CONFIG,
     "LinkBusy": ExitCode.BUSY,

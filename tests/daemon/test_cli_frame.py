@@ -1,5 +1,6 @@
 """The frame of the command line: one table of commands, one way from errors to words and codes."""
 
+import ast
 import json
 import os
 import subprocess
@@ -153,6 +154,28 @@ def test_errors_of_later_parts_are_known_by_name() -> None:
 
     assert code_of(Busy("x")) == ExitCode.BUSY
     assert code_of(RecordError("x")) == ExitCode.RECORD
+
+
+ANSWERED_WHERE_RAISED = {"OverrideError", "BadAddress", "BadMessage", "NoAnswer"}
+"""Errors that become a problem, a usage error or an exit code before they reach the frame."""
+
+
+def test_every_error_class_of_ours_leads_to_a_code() -> None:
+    """A new one must be given a row, or be answered where it is raised."""
+    bases: dict[str, list[str]] = {}
+    for folder in ("trialrunner", "drivers"):
+        for path in (Path(__file__).parents[2] / folder).rglob("*.py"):
+            for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+                if isinstance(node, ast.ClassDef):
+                    bases[node.name] = [base.id for base in node.bases if hasattr(base, "id")]
+
+    def lineage(name: str) -> set[str]:
+        return {name}.union(*(lineage(base) for base in bases.get(name, [])))
+
+    errors = {n for n in bases if lineage(n) & {"Exception", "OSError", "ValueError"}}
+    assert {"ConfigError", "LinkBusy", "RecordDamaged"} <= errors
+    homeless = {n for n in errors if not lineage(n) & set(BY_ERROR)} - ANSWERED_WHERE_RAISED
+    assert homeless == set()
 
 
 def test_an_error_of_another_library_is_not_taken_for_ours() -> None:

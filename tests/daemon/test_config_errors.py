@@ -144,7 +144,7 @@ def test_the_text_that_the_other_tests_break_is_good() -> None:
             "[ladder]",
             f'[operator]\ncommand_url = "ipc:///{"x" * 120}"\n[ladder]',
             "operator.command_url",
-            "1 to 107 bytes, found 121",
+            "at most 107 bytes, found 121",
         ),
         (
             "[ladder]",

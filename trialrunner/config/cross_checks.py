@@ -17,12 +17,9 @@ from trialrunner.core.laws import LawContext
 from trialrunner.core.settings import InputChannel, OutputChannel
 from trialrunner.core.trial import Array
 from trialrunner.reference import ProfileReference
-from trialrunner.runtime_dir import MAX_IPC_PATH_BYTES
 
 LINK_SCHEMES = ("serial", "zmq+tcp", "zmq+ipc")
 """Links that a daemon opens; `drivers.open` knows more, which only a rig's end uses."""
-
-LOOPBACK = ("127.", "localhost", "[::1]")
 
 
 def fit_problems(config: Config) -> list[Problem]:
@@ -119,9 +116,7 @@ def _address_problems(config: Config) -> Iterator[Problem]:
     elif scheme == "serial":
         yield from _serial_problems(config.link.url)
     for key in ("command_url", "telemetry_url"):
-        text = _socket_trouble(getattr(config, key))
-        if text:
-            yield Problem(("operator", key), text)
+        yield from _socket_problems(key, getattr(config, key))
     if config.command_url == config.telemetry_url:
         text = f"the same address as operator.command_url: {config.command_url}"
         yield Problem(("operator", "telemetry_url"), text)
@@ -136,19 +131,13 @@ def _serial_problems(url: str) -> Iterator[Problem]:
         yield Problem(("link", "url"), str(error))
 
 
-def _socket_trouble(url: str) -> str:
-    scheme, mark, rest = url.partition("://")
-    if scheme == "ipc" and mark:
-        size = len(rest.encode())
-        if 0 < size <= MAX_IPC_PATH_BYTES:
-            return ""
-        return f"expected a socket path of 1 to {MAX_IPC_PATH_BYTES} bytes, found {size}"
-    if scheme == "tcp" and rest.startswith(LOOPBACK):
-        return ""
-    return (
-        f"expected ipc:///path or tcp://127.0.0.1:port, found {url!r}; from another machine, "
-        "reach it through a tunnel that asks who you are"
-    )
+def _socket_problems(key: str, url: str) -> Iterator[Problem]:
+    from trialrunner.local_address import AddressError, socket_path
+
+    try:
+        socket_path(url)
+    except AddressError as error:
+        yield Problem(("operator", key), str(error))
 
 
 def _guard_problems(config: Config) -> Iterator[Problem]:

@@ -1,4 +1,4 @@
-"""`trialrunner tell` and its client, against a command socket that another thread serves."""
+"""`trialrunner tell`, against a command socket that another thread serves."""
 
 import json
 import os
@@ -15,12 +15,9 @@ import zmq
 
 from trialrunner.__main__ import run_command
 from trialrunner.exit_codes import ExitCode
-from trialrunner.operator_client import BadAddress, OperatorClient, new_id
 from trialrunner.operator_messages import (
     STATUS_FIELDS,
     VERBS,
-    BadMessage,
-    NoAnswer,
     OperatorAnswer,
     OperatorRequest,
 )
@@ -412,83 +409,3 @@ def test_what_a_rig_says_cannot_steer_the_terminal() -> None:
 def test_durations_have_two_units(seconds: float, text: str) -> None:
     """More would not be read."""
     assert duration(seconds) == text
-
-
-# -- the client ----------------------------------------------------------------------------------
-
-
-def test_a_request_is_sent_again_with_the_same_id_until_it_is_answered(tmp_path: Path) -> None:
-    """A lost answer costs a retry over a new connection, and the daemon applies it once."""
-    url = default_command_url("flaky")
-    runtime_dir()
-    with zmq.Context() as context, context.socket(zmq.ROUTER) as router:
-        router.bind(url)
-        got: list[list[bytes]] = []
-
-        def lose_two_then_answer() -> None:
-            while len(got) < 3:
-                got.append(router.recv_multipart())
-            reply = OperatorAnswer(request.id, True, "at last", 3, "2026-12-01T00:00:00Z")
-            router.send_multipart([got[-1][0], reply.to_json().encode()])
-
-        request = OperatorRequest(new_id(), "pause", "Ada", "lunch")
-        thread = threading.Thread(target=lose_two_then_answer)
-        thread.start()
-        with OperatorClient(url, retry_s=0.02) as client:
-            assert client.ask(request, timeout_s=30.0).text == "at last"
-        thread.join()
-    assert len({body for _, body in got}) == 1
-    assert len({peer for peer, _ in got}) == 3
-
-
-def test_a_daemon_that_does_not_answer_is_named_with_what_to_do() -> None:
-    """It listens and stays silent: stopped, or hung."""
-    url = default_command_url("mute")
-    runtime_dir()
-    request = OperatorRequest(new_id(), "halt", "Ada", "smoke")
-    with zmq.Context() as context, context.socket(zmq.ROUTER) as router:
-        router.bind(url)
-        with (
-            OperatorClient(url, retry_s=0.02) as client,
-            pytest.raises(NoAnswer, match=r"mute\.command: no answer within 0\.05 s.*own stop"),
-        ):
-            client.ask(request, timeout_s=0.05)
-
-
-def test_answers_to_other_requests_are_passed_over(serve: Callable[..., Served]) -> None:
-    """A late one must not be taken for the answer to this request."""
-    serve()
-    with OperatorClient(default_command_url("bead-axis")) as client:
-        late = OperatorRequest(new_id(), "pause", "Ada", "x")
-        client._send(late)
-        assert client.ask(OperatorRequest(new_id(), "freeze", "Ada", "y")).text == "freeze is done"
-
-
-@pytest.mark.parametrize(
-    ("reply", "words"),
-    [
-        (b"hello", "expected JSON"),
-        (b'{"id":"x"}', "lacks a key"),
-        (OperatorAnswer("", False, "expected JSON", None, "").to_json().encode(), "understand"),
-    ],
-)
-def test_something_else_that_answers_is_told_from_a_daemon(reply: bytes, words: str) -> None:
-    """Another program at the address, or a daemon of another version."""
-    url = default_command_url("odd")
-    runtime_dir()
-    with zmq.Context() as context, context.socket(zmq.ROUTER) as router:
-        router.bind(url)
-        thread = threading.Thread(
-            target=lambda: router.send_multipart([router.recv_multipart()[0], reply])
-        )
-        thread.start()
-        with OperatorClient(url) as client, pytest.raises(BadMessage, match=words):
-            client.ask(OperatorRequest(new_id(), "status", "Ada"))
-        thread.join()
-
-
-@pytest.mark.parametrize("url", ["", "nonsense", "udp://x", "tcp://127.0.0.1", "ipc://"])
-def test_an_address_that_cannot_be_connected_to_is_told(url: str) -> None:
-    """With the forms that can."""
-    with pytest.raises(BadAddress, match="expected ipc:///path or tcp://host:port"):
-        OperatorClient(url)

@@ -260,7 +260,8 @@ def test_the_operating_systems_refusal_is_put_into_words() -> None:
 
 def test_refused_addresses_lead_to_foreseen_exit_codes() -> None:
     """No crash report for them."""
-    assert code_of(AddressError("x")) == code_of(NotPrivate("x")) == ExitCode.SYSTEM
+    assert code_of(AddressError("x")) == ExitCode.CONFIG
+    assert code_of(NotPrivate("x")) == ExitCode.SYSTEM
     assert code_of(Busy("x")) == ExitCode.BUSY
 
 

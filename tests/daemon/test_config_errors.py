@@ -231,6 +231,13 @@ def test_a_profile_longer_than_the_trial_is_refused_with_both_lengths() -> None:
     assert "the trial has 200" in problem
 
 
+@pytest.mark.parametrize("key", ["velocity_limit_per_s", "acceleration_limit_per_s2"])
+def test_a_limit_that_next_to_forbids_to_move_is_a_long_move(key: str) -> None:
+    """The smallest number there is must not end in an arithmetic error."""
+    (problem,) = problems_of(GOOD, (f"reference.{key}=5e-324",))
+    assert "the moves and dwells need" in problem
+
+
 def test_everything_wrong_is_said_at_once_in_the_order_of_the_file() -> None:
     """Nobody wants to mend a file one message at a time."""
     text = GOOD

@@ -147,7 +147,7 @@ def _counts(v: float, a: float, j: float, s: float) -> tuple[int, int, int, int]
     a = min(a, j * n3)
     n2 = _first(max(room3, 1), lambda n: a * n >= v or a * n * (n + room3) >= 1)
     v = min(v, a * n2)
-    n1 = max(math.ceil((1.0 - ROUNDING) / v), n2 + (n3 + n4 - 1 if room3 else 0))
+    n1 = _first(max(n2 + (n3 + n4 - 1 if room3 else 0), 1), lambda n: v * n >= 1)
     return n1, n2, n3, n4
 
 

@@ -30,7 +30,7 @@ from trialrunner.locks import hold_lock, link_lock_path
 from trialrunner.logs import get_logger
 from trialrunner.observer import Observer
 from trialrunner.operator_socket import OperatorSocket
-from trialrunner.record import RecordReader, RecordWriter, RunFacts
+from trialrunner.record import DaemonRow, RecordReader, RecordWriter, RunFacts
 from trialrunner.session import Built, RunRefused, Session, SessionSettings
 from trialrunner.telemetry import Publisher
 from trialrunner.trial_intake import Intake
@@ -124,7 +124,9 @@ class Builder:
             version=__version__,
             started_utc=self.clock.utc(),
         )
-        return self._in_executor(lambda: RecordWriter.create(path, facts, reference, state, carry))
+        return self._in_executor(
+            lambda: RecordWriter.create(path, facts, reference, state, carry, self.clock.now_ns)
+        )
 
     def _resume(
         self, path: Path, limits: LimitsInForce, reference: Array, sample_type: str
@@ -143,7 +145,8 @@ class Builder:
                 f"{path} was recorded with other settings:\n  {lines}\nGo back to the old ones to "
                 "resume it, or begin a new run with --new-run (the old record is kept beside it)."
             )
-        return self._in_executor(lambda: RecordWriter.open(path))
+        daemon = DaemonRow.start(self.config.text, __version__, self.clock.utc())
+        return self._in_executor(lambda: RecordWriter.open(path, daemon, self.clock.now_ns))
 
     def _in_executor(self, work: Callable[[], RecordWriter]) -> RecordWriter:
         return self.executor.submit(work).result()
@@ -233,4 +236,4 @@ def _close_session(session: Session, executor: Executor) -> None:
     session.line.close()
     built = session.built
     if built is not None:
-        executor.submit(built.writer.close).result()
+        executor.submit(built.writer.close, session.clock.utc()).result()

@@ -22,6 +22,10 @@ class Lock:
         self.path = path
         self._handle = handle
 
+    @property
+    def held(self) -> bool:
+        return self._handle >= 0
+
     def release(self) -> None:
         if self._handle >= 0:
             # The file stays: removing it would let two processes hold locks of one name.

@@ -3,15 +3,25 @@
 The error is not stored: it is reference minus output, exactly.
 """
 
-from trialrunner.record.errors import NotARecord, RecordDamaged, RecordError, RecordUnwritable
+from trialrunner.record.errors import (
+    NotARecord,
+    RecordBusy,
+    RecordDamaged,
+    RecordError,
+    RecordMisuse,
+    RecordUnwritable,
+)
 from trialrunner.record.reader import RecordedTrial, RecordReader, TrialSummary
-from trialrunner.record.rows import RequestRow, RunFacts, Transition, TrialTiming
+from trialrunner.record.rows import DaemonRow, RequestRow, RunFacts, Transition, TrialTiming
 from trialrunner.record.writer import RecordWriter, sqlite_warning
 
 __all__ = [
+    "DaemonRow",
     "NotARecord",
+    "RecordBusy",
     "RecordDamaged",
     "RecordError",
+    "RecordMisuse",
     "RecordReader",
     "RecordUnwritable",
     "RecordWriter",

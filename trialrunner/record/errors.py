@@ -4,13 +4,15 @@ import errno
 import sqlite3
 from pathlib import Path
 
+from trialrunner.locks import Busy
+
 
 class RecordError(Exception):
     """Base of all errors of a record; nothing that was committed is lost by any of them."""
 
 
 class NotARecord(RecordError):
-    """The file is not one of ours, or of a newer version."""
+    """The file is not one of ours, or of another version."""
 
 
 class RecordDamaged(RecordError):
@@ -21,21 +23,43 @@ class RecordUnwritable(RecordError):
     """The disk is full, the file or its directory is read-only, or the device failed."""
 
 
+class RecordMisuse(RecordError):
+    """What was handed over does not continue this record; a fault of the program."""
+
+
+class RecordBusy(Busy, RecordError):
+    """Another process writes the record."""
+
+
+_PERMISSION = ("readonly", "unable to open", "attempt to write")
+
+
 def in_words(path: Path, error: sqlite3.Error | OSError) -> RecordError:
     """A foreign error as one of ours."""
     text = str(error)
-    full = "disk is full" in text or getattr(error, "errno", None) == errno.ENOSPC
-    if full:
+    number = getattr(error, "errno", None)
+    if "disk is full" in text or number in (errno.ENOSPC, errno.EDQUOT):
         return RecordUnwritable(
             f"{path}: the disk is full; every committed trial is safe. Free space, then start the "
             "same configuration again"
         )
-    if "readonly" in text or "unable to open" in text or isinstance(error, PermissionError):
+    if isinstance(error, FileNotFoundError):
+        return RecordUnwritable(f"{path}: its directory does not exist; create it")
+    if isinstance(error, PermissionError) or any(words in text for words in _PERMISSION):
         return RecordUnwritable(
-            f"{path}: cannot be written ({text}); check the permissions of file and directory"
+            f"{path}: cannot be opened or written ({text}); check the permissions of the file and "
+            "of its directory"
         )
     if "not a database" in text:
         return NotARecord(f"{path}: is not a record of trialrunner; choose another file name")
     if "malformed" in text:
         return RecordDamaged(f"{path}: is damaged ({text}); copy it away before anything else")
-    return RecordUnwritable(f"{path}: {text}; the record takes no more writes in this process")
+    if "locked" in text:
+        return RecordUnwritable(
+            f"{path}: another program writes in it; close that one, trialrunner must be the only "
+            "writer"
+        )
+    return RecordUnwritable(
+        f"{path}: {text}; every committed trial is safe, this process writes no more. Check the "
+        "disk, then start the same configuration again"
+    )

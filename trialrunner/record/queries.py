@@ -1,9 +1,7 @@
 """Reading a record through any connection; used by writer and reader alike."""
 
-import hashlib
 import json
 import sqlite3
-from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -15,7 +13,10 @@ from trialrunner.record.errors import NotARecord, RecordDamaged, RecordUnwritabl
 from trialrunner.record.rows import RunFacts
 from trialrunner.record.schema import APPLICATION_ID, SCHEMA_VERSION
 
-_ROW = "dtype, shape, unit, sha256, data"
+BLOB = "dtype, shape, unit, sha256, data"
+
+LOCK_WAIT_S = 5.0
+"""Patience with a program that holds SQLite's own lock for a moment."""
 
 
 def require_ours(path: Path) -> None:
@@ -32,10 +33,14 @@ def require_ours(path: Path) -> None:
     except (sqlite3.Error, OSError) as error:
         raise in_words(path, error) from None
     if application != APPLICATION_ID:
-        raise NotARecord(f"{path}: is an SQLite file of another program; choose another file name")
-    if version != SCHEMA_VERSION:
         raise NotARecord(
-            f"{path}: has the layout {version}, this trialrunner reads {SCHEMA_VERSION}; "
+            f"{path}: is a file of another program, not a record of trialrunner; choose another "
+            "file name"
+        )
+    if version != SCHEMA_VERSION:
+        age = "newer" if version > SCHEMA_VERSION else "older"
+        raise NotARecord(
+            f"{path}: has the {age} layout {version}, this trialrunner reads {SCHEMA_VERSION}; "
             "use the version that wrote it"
         )
 
@@ -43,105 +48,99 @@ def require_ours(path: Path) -> None:
 def read_only(path: Path) -> sqlite3.Connection:
     """A connection that can neither write nor checkpoint."""
     uri = path.resolve().as_uri() + "?mode=ro"
-    return sqlite3.connect(uri, uri=True, isolation_level=None, timeout=5.0)
+    db = _connect(uri)
+    try:
+        db.execute("SELECT 1 FROM sqlite_schema").fetchone()
+    except sqlite3.OperationalError as error:
+        db.close()
+        log = path.with_name(path.name + "-wal")
+        if "unable to open" not in str(error) or (log.exists() and log.stat().st_size):
+            raise
+        # A finished record on a read-only medium: nobody can be writing it.
+        return _connect(uri + "&immutable=1")
+    return db
+
+
+def _connect(uri: str) -> sqlite3.Connection:
+    return sqlite3.connect(uri, uri=True, isolation_level=None, timeout=LOCK_WAIT_S)
 
 
 def facts(db: sqlite3.Connection) -> RunFacts:
-    rows = dict(db.execute("SELECT key, value FROM facts WHERE key != 'state'").fetchall())
-    return RunFacts.from_rows(rows)
+    return RunFacts.from_rows(dict(db.execute("SELECT key, value FROM facts").fetchall()))
 
 
-def array(db: sqlite3.Connection, trial: int, name: str) -> Any:
+def array(db: sqlite3.Connection, entry: int, name: str) -> Any:
     """Raises RecordDamaged if it is missing or not what was written."""
-    query = f"SELECT {_ROW} FROM arrays WHERE trial = ? AND name = ?"
-    row = db.execute(query, (trial, name)).fetchone()
+    query = f"SELECT {BLOB} FROM arrays WHERE entry = ? AND name = ?"
+    row = db.execute(query, (entry, name)).fetchone()
     if row is None:
-        raise RecordDamaged(f"trial {trial}: the array {name} is missing")
-    return arrays.unpack(f"trial {trial}, {name}", row)
+        raise RecordDamaged(f"{where(db, entry)}: the array {name} is missing")
+    return arrays.unpack(f"{where(db, entry)}, {name}", row)
 
 
-def arrays_of(db: sqlite3.Connection, trial: int) -> dict[str, Any]:
-    """Every array of a trial by name."""
-    query = f"SELECT name, {_ROW} FROM arrays WHERE trial = ?"
+def arrays_of(db: sqlite3.Connection, entry: int, left_for_next: bool) -> dict[str, Any]:
+    """By name the arrays of an entry: its own, or those that it left for the next trial."""
+    test = "GLOB" if left_for_next else "NOT GLOB"
+    query = f"SELECT name, {BLOB} FROM arrays WHERE entry = ? AND name {test} '{arrays.NEXT}*'"
+    owner = where(db, entry)
     return {
-        name: arrays.unpack(f"trial {trial}, {name}", tuple(row))
-        for name, *row in db.execute(query, (trial,))
+        name: arrays.unpack(f"{owner}, {name}", tuple(row))
+        for name, *row in db.execute(query, (entry,))
     }
 
 
-def first_state(db: sqlite3.Connection) -> RunState:
-    (text,) = db.execute("SELECT value FROM facts WHERE key = 'state'").fetchone()
-    return RunState.from_json(json.loads(text))
+def where(db: sqlite3.Connection, entry: int) -> str:
+    """An entry in words."""
+    row = db.execute("SELECT trial FROM trials WHERE entry = ?", (entry,)).fetchone()
+    return f"entry {entry}" if row is None else f"trial {row[0]}"
 
 
-def last_state(db: sqlite3.Connection) -> RunState:
-    """After the last trial and the requests that followed it."""
-    row = db.execute("SELECT trial, state FROM trials ORDER BY trial DESC LIMIT 1").fetchone()
-    after, text = (-1, None) if row is None else row
-    changed = db.execute(
-        "SELECT state FROM requests WHERE changes_state AND effect_trial > ? "
-        "ORDER BY place DESC LIMIT 1",
-        (after,),
+def state_after(db: sqlite3.Connection, entry: int) -> RunState:
+    """The run state that an entry left: its own or the last one before it."""
+    row = db.execute(
+        "SELECT state FROM entries WHERE entry <= ? AND state IS NOT NULL "
+        "ORDER BY entry DESC LIMIT 1",
+        (entry,),
     ).fetchone()
-    if changed is not None:
-        text = changed[0]
-    return first_state(db) if text is None else RunState.from_json(json.loads(text))
+    if row is None:
+        raise RecordDamaged(f"entry {entry}: there is no run state")
+    return RunState.from_json(json.loads(row[0]))
 
 
-def carry_before(db: sqlite3.Connection, trial: int, n_outputs: int) -> Carry:
-    """The arrays with which a trial began, or will begin."""
-    return arrays.unpack_carry(arrays_of(db, trial - 1), n_outputs)
+def last_entry(db: sqlite3.Connection) -> tuple[int, bytes]:
+    """Number and chain of the last entry; (-1, b"") in an empty record."""
+    row = db.execute("SELECT entry, chain FROM entries ORDER BY entry DESC LIMIT 1").fetchone()
+    return (-1, b"") if row is None else (int(row[0]), bytes(row[1]))
+
+
+def carry_entry(db: sqlite3.Connection, before_trial: int | None = None) -> int:
+    """The entry whose arrays a trial began with; None stands for the trial to come."""
+    if before_trial is not None:
+        query = "SELECT carry_entry FROM trials WHERE trial = ?"
+        row = db.execute(query, (before_trial,)).fetchone()
+        if row is not None:
+            return int(row[0])
+    row = db.execute(
+        "SELECT entry FROM arrays WHERE name = ? ORDER BY entry DESC LIMIT 1",
+        (arrays.FEEDFORWARD,),
+    ).fetchone()
+    if row is None:
+        raise RecordDamaged("the feedforward of the next trial is missing")
+    return int(row[0])
+
+
+def carry_of(db: sqlite3.Connection, entry: int, n_outputs: int) -> Carry | None:
+    """The arrays that an entry left for the next trial; None where it left them as they were."""
+    found = arrays_of(db, entry, left_for_next=True)
+    return arrays.unpack_carry(found, n_outputs) if found else None
 
 
 def learned_before(db: sqlite3.Connection, trial: int) -> Array:
     """The learned feedforward with which a trial was run. Raises CoreError for an unknown one."""
-    ran = db.execute("SELECT 1 FROM trials WHERE trial = ?", (trial,)).fetchone()
-    if ran is None:
+    row = db.execute("SELECT carry_entry FROM trials WHERE trial = ?", (trial,)).fetchone()
+    if row is None:
         raise CoreError(f"trial {trial} is not in the record, so its feedforward is not known")
-    names = ("learned", "feedforward")
-    for name in names:
-        query = f"SELECT {_ROW} FROM arrays WHERE trial = ? AND name = ?"
-        row = db.execute(query, (trial - 1, arrays.NEXT + name)).fetchone()
-        if row is not None:
-            found: Array = arrays.unpack(f"trial {trial}, {name}", row)
-            return found
-    raise RecordDamaged(f"trial {trial}: its feedforward is missing")
-
-
-def last_chain(db: sqlite3.Connection) -> bytes:
-    row = db.execute("SELECT chain FROM trials ORDER BY trial DESC LIMIT 1").fetchone()
-    return b"" if row is None else bytes(row[0])
-
-
-def digest(db: sqlite3.Connection, trial: int) -> bytes:
-    """SHA-256 of the feedforward that a trial left for the next one."""
-    row = db.execute(
-        "SELECT sha256 FROM arrays WHERE trial = ? AND name = ?",
-        (trial, arrays.NEXT + "feedforward"),
-    ).fetchone()
-    return b"" if row is None else bytes(row[0])
-
-
-def chain_link(
-    before: bytes, row: tuple[Any, ...], played: bytes, own: Mapping[str, arrays.Blob]
-) -> bytes:
-    """SHA-256 over the link before, the row, the feedforward played and what was measured."""
-    sums = {name: blob.sha256 for name, blob in own.items()}
-    return chain_of(before, row, played, sums)
-
-
-def chain_of(
-    before: bytes, row: tuple[Any, ...], played: bytes, sums: Mapping[str, bytes]
-) -> bytes:
-    link = hashlib.sha256(before)
-    link.update(json.dumps([_plain(value) for value in row]).encode())
-    link.update(played)
-    for name in sorted(sums):
-        link.update(name.encode())
-        link.update(sums[name])
-    return link.digest()
-
-
-def _plain(value: Any) -> Any:
-    """SQLite hands a bool back as an integer."""
-    return int(value) if isinstance(value, bool) else value
+    query = "SELECT 1 FROM arrays WHERE entry = ? AND name = ?"
+    own = db.execute(query, (row[0], arrays.NEXT + "learned")).fetchone()
+    found: Array = array(db, row[0], arrays.NEXT + ("learned" if own else "feedforward"))
+    return found

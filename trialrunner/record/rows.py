@@ -1,7 +1,9 @@
 """What the daemon hands to a record beside trials and outcomes."""
 
 import json
+import platform
 from dataclasses import asdict, dataclass, replace
+from importlib.metadata import version as version_of
 from typing import Any
 
 import numpy as np
@@ -55,6 +57,10 @@ class RunFacts:
     def limits_in_force(self) -> LimitsInForce:
         return LimitsInForce(**{name: np.array(values) for name, values in self.limits.items()})
 
+    def units(self, role: str) -> tuple[str, ...]:
+        """UCUM codes of the rig's `inputs`, `outputs` or `auxiliary` channels, in its order."""
+        return tuple(channel["unit"] for channel in self.rig.get(role, ()))
+
     def to_rows(self) -> dict[str, str]:
         """Key and JSON text of each fact; infinities as text, because JSON has none."""
         return {
@@ -68,6 +74,36 @@ class RunFacts:
 
 def _limit_lists(limits: LimitsInForce) -> dict[str, list[float]]:
     return {name: getattr(limits, name).tolist() for name in ("low", "high", "rate_per_s")}
+
+
+@dataclass(frozen=True)
+class DaemonRow:
+    """A daemon takes the record up, with the configuration that holds from there on, or lays it
+    down. One that died has no second row."""
+
+    event: str
+    """start or stop."""
+    utc: str
+    version: str
+    """Of trialrunner."""
+    platform: str
+    """JSON: versions of what computes; other ones may round otherwise."""
+    config_text: str = ""
+
+    @classmethod
+    def start(cls, config_text: str, version: str, utc: str) -> "DaemonRow":
+        return cls("start", utc, version, platform_json(), config_text)
+
+
+def platform_json() -> str:
+    """Machine and versions on which bit-identical arithmetic depends."""
+    found = {
+        "machine": platform.machine(),
+        "python": platform.python_version(),
+        "numpy": np.__version__,
+        "scipy": version_of("scipy"),
+    }
+    return json.dumps(found)
 
 
 @dataclass(frozen=True)

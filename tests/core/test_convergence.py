@@ -1,11 +1,12 @@
 """Bookkeeping of norms and the stop rules, on series of norms."""
 
+import math
 from collections.abc import Iterable
 from dataclasses import replace
 
 import pytest
 
-from trialrunner.core.convergence import book, stop_reason
+from trialrunner.core.convergence import book, level_around, stop_reason
 from trialrunner.core.run_state import RECENT_NORMS, RunState
 from trialrunner.core.settings import StopSettings
 from trialrunner.core.trial import Level, Purpose, Verdict
@@ -32,7 +33,7 @@ def test_best_first_and_last_good_are_kept() -> None:
     """The norm belongs to the trial, the best is the smallest, the first stays the first."""
     state, _ = run([3.0, 1.0, 2.0], StopSettings())
     assert (state.first_norm, state.best_trial, state.best_norm) == (3.0, 1, 1.0)
-    assert (state.last_good_trial, state.last_good_norm) == (2, 2.0)
+    assert state.last_good_trial == 2
     assert (state.recent_norms, state.recent_trials) == ((3.0, 1.0, 2.0), (0, 1, 2))
     assert state.counted == 3
     equal, _ = run([1.0], StopSettings(), state=state)
@@ -56,6 +57,26 @@ def test_complaints_keep_a_trial_from_being_best_or_good(
     state, _ = run([3.0], StopSettings())
     state, _ = run([1.0], StopSettings(), level=level, state=state)
     assert (state.best_trial, state.last_good_trial) == (best, good)
+
+
+def test_the_level_of_the_best_is_that_of_the_trials_around_it() -> None:
+    """Two on each side, as they come in; what follows later no longer matters."""
+    norms = [3.0, 1.25, 0.5, 1.0, 1.75, 9.0, 9.0]
+    levels = [run(norms[: k + 1], StopSettings())[0].best_level for k in range(len(norms))]
+    assert levels == [3.0, 2.125, 1.25, 1.125, 1.25, 1.25, 1.25]
+
+
+def test_a_trial_to_roll_back_from_does_not_count_for_the_level() -> None:
+    """It tells nothing about the feedforward before it."""
+    state, _ = run([3.0, 1.0], StopSettings())
+    level = state.best_level
+    state, _ = run([9.0], StopSettings(), level=Level.ROLL_BACK, state=state)
+    assert state.best_level == level
+
+
+def test_a_forgotten_trial_has_no_level() -> None:
+    """Infinity stands for what nobody remembers."""
+    assert level_around(run([1.0] * 3, StopSettings())[0], 7) == math.inf
 
 
 def test_probe_and_floor_trials_leave_the_books_alone() -> None:

@@ -192,9 +192,9 @@ def test_a_stall_ends_the_run() -> None:
 
 def test_an_unconfirmed_roll_back_halts() -> None:
     """The old feedforward no longer gives the old error: the rig has changed."""
-    played = player().play("..r.", [2.0, 1.0, 5.0, 1.6])
+    played = player().play("..r.", [1.0, 1.0, 5.0, 1.6])
     assert played.acts == "LLRH"
-    assert played.decisions[2].recall_trial == 1
+    assert played.decisions[2].recall_trial == 0
     for part in ("1.6", "1.5", "not confirmed"):
         assert part in played.state.halted
     assert played.last.added[0].guard == "ladder"
@@ -228,7 +228,7 @@ def test_the_trial_that_asks_for_a_roll_back_is_not_its_target() -> None:
     """Even if its own error norm was the smallest."""
     played = player().play("..r", [2.0, 1.0, 0.5])
     assert played.last.recall_trial == 1
-    assert played.state.confirm_norm == 1.0
+    assert played.state.confirm_norm == 1.5, "the level of the trials before it"
 
 
 def test_what_an_operator_froze_stays_as_it_is() -> None:

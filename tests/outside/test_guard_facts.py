@@ -8,10 +8,11 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from trialrunner.core.guards import MAD_TO_SIGMA, GuardContext, rose
+from trialrunner.core.guards import GuardContext, rose
 from trialrunner.core.guards.divergence import Divergence
 from trialrunner.core.guards.error_growth import ErrorGrowth
 from trialrunner.core.guards.readings import find_spike
+from trialrunner.core.scatter import MAD_TO_SIGMA
 from trialrunner.core.settings import InputChannel, OutputChannel
 from trialrunner.core.trial import Level, Purpose, Trial, Verdict
 

@@ -212,7 +212,9 @@ class Advancer:
         trial, norm = _operator_target(target, state)
         state = ladder.return_to(state, norm, self._settings.ladder)
         state, carry = _recalled(_judge_anew(state), carry, recall(trial))
-        known = f"error norm {norm:.4g}" if np.isfinite(norm) else "error norm no longer known"
+        known = (
+            f"error norm about {norm:.4g}" if np.isfinite(norm) else "error norm no longer known"
+        )
         sentence = (
             f"Rolled back to the feedforward of trial {trial} ({known}); {state.confirm_left} "
             f"confirmation trials follow."

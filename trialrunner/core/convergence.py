@@ -3,10 +3,14 @@
 import math
 from collections.abc import Sequence
 from dataclasses import replace
+from statistics import median
 
 from trialrunner.core.run_state import RECENT_NORMS, RunState
 from trialrunner.core.settings import StopSettings
 from trialrunner.core.trial import Level, Purpose, Verdict
+
+AROUND = 2
+"""Trials on each side of one that tell what error norm its feedforward usually gives."""
 
 
 def book(
@@ -35,10 +39,20 @@ def book(
     )
     if level < Level.ROLL_BACK and norm < state.best_norm:
         state = replace(state, best_trial=state.trial, best_norm=norm)
+    if level < Level.ROLL_BACK and state.best_trial in state.recent_trials[-1 - AROUND :]:
+        state = replace(state, best_level=level_around(state, state.best_trial))
     if level is Level.PASS:
-        state = replace(state, last_good_trial=state.trial, last_good_norm=norm)
+        state = replace(state, last_good_trial=state.trial)
     learns = purpose is Purpose.LEARN and state.learning
     return _stall(state, norm, settings) if learns else state
+
+
+def level_around(state: RunState, trial: int) -> float:
+    """Median error norm of a trial and the two before and after it; infinity if forgotten."""
+    if trial not in state.recent_trials:
+        return math.inf
+    place = state.recent_trials.index(trial)
+    return median(state.recent_norms[max(0, place - AROUND) : place + AROUND + 1])
 
 
 def _stall(state: RunState, norm: float, settings: StopSettings) -> RunState:

@@ -3,12 +3,13 @@
 Here `state.trial` is still the trial that was judged; `decision.decide` moves on to the next.
 """
 
-import math
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from enum import StrEnum
 
+from trialrunner.core.convergence import level_around
 from trialrunner.core.run_state import RunState
+from trialrunner.core.scatter import allowance
 from trialrunner.core.settings import LadderSettings
 from trialrunner.core.trial import Level, Purpose, Verdict
 
@@ -17,6 +18,10 @@ NAME = "ladder"
 
 OPERATOR = "operator"
 """Stands in `frozen_by` for a freeze that only an operator ends."""
+
+
+CONFIRM_DEVIATIONS = 3.0
+"""Standard deviations of the norm's scatter by which the limit of a confirmation is widened."""
 
 
 class Act(StrEnum):
@@ -112,25 +117,24 @@ def roll_back(state: RunState, verdict: Verdict, settings: LadderSettings) -> De
     state = replace(return_to(state, norm, settings), gain=gain, roll_backs=state.roll_backs + 1)
     sentence = (
         f"Rolled back from trial {state.trial} to the feedforward of trial {target} (error norm "
-        f"{norm:.4g}), gain now {gain:.3g}, {state.confirm_left} confirmation trials, roll back "
-        f"{state.roll_backs} of at most {settings.max_roll_backs}. {text}."
+        f"about {norm:.4g}), gain now {gain:.3g}, {state.confirm_left} confirmation trials, "
+        f"roll back {state.roll_backs} of at most {settings.max_roll_backs}. {text}."
     )
     return Decision(Act.RECALL, state, sentence, recall_trial=target)
 
 
 def target_of(state: RunState, target: str | int) -> tuple[int, float]:
-    """Trial that a roll back returns to and its error norm; (-1, infinity) if there is none.
+    """Trial that a roll back returns to and the error norm to expect; (-1, infinity) if none.
 
-    A numbered trial of which nobody remembers the norm has norm infinity; one that has not been
-    run, and a last good one that does not exist, stand for the best.
+    What to expect is the level around the trial, infinity if nobody remembers it. A trial that has
+    not been run, and a last good one that does not exist, stand for the best.
     """
-    if isinstance(target, int) and target < state.trial:
-        norms = dict(zip(state.recent_trials, state.recent_norms, strict=True))
-        norms |= {state.last_good_trial: state.last_good_norm, state.best_trial: state.best_norm}
-        return target, norms.get(target, math.inf)
+    trial = state.best_trial
     if target == "last_good" and state.last_good_trial >= 0:
-        return state.last_good_trial, state.last_good_norm
-    return state.best_trial, state.best_norm
+        trial = state.last_good_trial
+    elif isinstance(target, int) and target < state.trial:
+        trial = target
+    return trial, state.best_level if trial == state.best_trial else level_around(state, trial)
 
 
 def return_to(state: RunState, norm: float, settings: LadderSettings) -> RunState:
@@ -153,7 +157,8 @@ def unconfirmed(
     Then the feedforward is not to blame, and a person has to look at the rig. Old norms no longer
     hold, so the books begin again with this trial, in case the run is resumed.
     """
-    limit = settings.confirm_ratio * state.confirm_norm
+    wider = allowance(state.recent_norms, CONFIRM_DEVIATIONS)
+    limit = settings.confirm_ratio * wider * state.confirm_norm
     if norm <= limit and verdict.level < Level.ROLL_BACK:
         return None
     after = replace(state, purpose=Purpose.LEARN, confirm_left=0)
@@ -162,15 +167,15 @@ def unconfirmed(
             after,
             best_trial=state.trial,
             best_norm=norm,
+            best_level=norm,
             last_good_trial=-1,
-            last_good_norm=math.inf,
             stall=0,
             stall_norm=norm,
         )
         reason = (
             f"the roll back is not confirmed: the error norm is {norm:.4g}; the limit is "
             f"{limit:.4g}, {settings.confirm_ratio:.3g} times the {state.confirm_norm:.4g} "
-            f"returned to"
+            f"returned to, widened by {wider:.3g} for the scatter from trial to trial"
         )
         return _own_halt(after, reason, norm, limit)
     reason = f"a roll back did not help, {verdict.guard} still asks for one: {verdict.reason}"

@@ -43,7 +43,7 @@ class RunState:
     baseline_left: int = 0
     confirm_left: int = 0
     confirm_norm: float = math.inf
-    """Error norm that confirmation trials must come back to."""
+    """Error norm that confirmation trials should come back to."""
     floor_left: int = -1
     """Floor trials still to run; -1: the floor phase has not begun."""
     floor_count: int = 0
@@ -55,9 +55,11 @@ class RunState:
     """The trial with the smallest error norm. Frozen repeats compete too: it stands for a
     feedforward, and with several trials of the same one their smallest norm stands for it."""
     best_norm: float = math.inf
+    best_level: float = math.inf
+    """Median error norm of the trials around the best one: what its feedforward can be expected to
+    give, where the best of many trials was also a lucky one."""
     last_good_trial: int = -1
     """The last trial about which no guard complained."""
-    last_good_norm: float = math.inf
     stall: int = 0
     """Learning trials since the error norm last improved enough."""
     stall_norm: float = math.inf

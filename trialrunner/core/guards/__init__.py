@@ -19,9 +19,6 @@ from trialrunner.core.trial import GuardResult, Level, Mask, Memory, Trial, Verd
 Action = Literal["warn", "freeze", "roll back", "halt"]
 """What a guard asks for when it fires; the words of the verdict ladder."""
 
-MAD_TO_SIGMA = 1.4826
-"""Median absolute deviation to standard deviation, for normal noise."""
-
 
 class Stage(StrEnum):
     ADMISSION = "admission"

@@ -5,7 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from trialrunner.core.guards import MAD_TO_SIGMA
+from trialrunner.core.scatter import MAD_TO_SIGMA
 from trialrunner.core.trial import Array
 
 Indices = NDArray[np.intp]

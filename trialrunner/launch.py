@@ -29,6 +29,7 @@ from trialrunner.daemon import Daemon, Waker
 from trialrunner.locks import hold_lock, link_lock_path
 from trialrunner.logs import get_logger
 from trialrunner.observer import Observer
+from trialrunner.operator_messages import OperatorAnswer, parse_answer
 from trialrunner.operator_socket import OperatorSocket
 from trialrunner.record import DaemonRow, RecordReader, RecordWriter, RunFacts
 from trialrunner.session import Built, RunRefused, Session, SessionSettings
@@ -152,6 +153,14 @@ class Builder:
         return self.executor.submit(work).result()
 
 
+def earlier_answers(path: Path) -> dict[str, OperatorAnswer]:
+    """Answers to requests on record by their id: one sent again after a restart is not redone."""
+    if not path.exists():
+        return {}
+    with RecordReader(path) as reader:
+        return {row.id: parse_answer(row.answer.encode()) for row in reader.requests()}
+
+
 def set_aside(path: Path, utc: str) -> None:
     """Rename an existing record so that a new one can take its name; nothing is deleted."""
     stamp = "".join(letter for letter in utc if letter.isdigit())[:14]
@@ -185,7 +194,9 @@ def launched(
         executor = ThreadPoolExecutor(1, thread_name_prefix="update")
         stack.callback(executor.shutdown)
         context = stack.enter_context(zmq.Context())
-        operator = OperatorSocket(context, config.command_url)
+        operator = OperatorSocket(
+            context, config.command_url, known=earlier_answers(config.record_path).get
+        )
         stack.callback(operator.close)
         publisher = Publisher(context, config.telemetry_url)
         stack.callback(publisher.close)

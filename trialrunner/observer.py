@@ -84,7 +84,8 @@ class Observer:
 
     def transition(self, before: State, event: Event, after: State, cause: str) -> None:
         self.status["state"] = after.value
-        if after is State.HALTED:
+        if after is State.HALTED and before is not after:
+            # The first cause; what follows from it while halted does not hide it.
             self.status["rig"]["fault"] = cause
         if before is not after and after in (State.HALTED, State.PAUSED):
             self._log("warning", f"run is {after}", cause=cause)

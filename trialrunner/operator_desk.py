@@ -13,6 +13,9 @@ AT_REST = frozenset({State.IDLE, State.PAUSED, State.HALTED})
 """States between trials, in which a request can change the run state at once."""
 
 
+UNDER_WAY = frozenset({State.RUNNING, State.SETTLING, State.UPDATING})
+
+
 @dataclass(frozen=True)
 class Ruling:
     """What the desk decided about one request."""
@@ -38,13 +41,15 @@ class Situation(Protocol):
 def rule(request: OperatorRequest, now: Situation) -> Ruling:
     """Decide on a request; pure."""
     boundary = now.state.trial + (now.cycle.state not in AT_REST)
+    # A trial that has not started need not be waited for.
+    stop = now.state.trial + (now.cycle.state in UNDER_WAY)
     if now.state.over and request.verb not in ("status", "note"):
         return Ruling(False, f"the run is over: {now.state.over}", now.state.trial)
     match request.verb:
         case "status" | "note":
             return Ruling(True, "", now.state.trial)
         case "pause":
-            return _pause(now, boundary)
+            return _pause(now, stop)
         case "resume":
             return _resume(now)
         case "freeze" | "learn":
@@ -59,7 +64,7 @@ def rule(request: OperatorRequest, now: Situation) -> Ruling:
             text = "the rig is being brought to its safe state; only resume leaves it"
             return Ruling(True, text, now.state.trial, event=Event.HALT)
         case "end":
-            return Ruling(True, f"the run ends before trial {boundary}", boundary, event=Event.END)
+            return Ruling(True, f"the run ends before trial {stop}", stop, event=Event.END)
     return Ruling(False, f"unknown verb {request.verb}", now.state.trial)
 
 

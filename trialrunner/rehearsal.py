@@ -171,7 +171,8 @@ class Processes:
             command += ["--fault", spec]
         for name, value in table.options.items():
             option = "--" + name.replace("_", "-")
-            command += [option] if value is True else [option, str(value)] if value else []
+            if value is not False:
+                command += [option] if value is True else [option, str(value)]
         return [*command, "--real-time"] if wanted.real_time else command
 
     def _daemon_command(self, url: str) -> list[str]:
@@ -199,8 +200,8 @@ class Processes:
             while True:
                 alive = daemon.poll() is None
                 while socket.poll(100 if alive else 0):
-                    topic, _, body = socket.recv().partition(b"\0")
-                    yield Progress(topic.decode(), json.loads(body)["data"])
+                    name, _, body = socket.recv().partition(b"\0")
+                    yield Progress(name.decode(), json.loads(body)["data"])
                 if not alive:
                     return
 
@@ -229,7 +230,8 @@ class Processes:
 
 def summarise(reader: RecordReader, plant: str, link: str, daemon_exit: int) -> Summary:
     """The result of a run from its record."""
-    state, floor_norms, verdicts = reader.last_state(), [], {}
+    state, floor_norms = reader.last_state(), []
+    verdicts: dict[str, int] = {}
     for summary in reader.summaries():
         if summary.purpose is Purpose.FLOOR and not summary.void:
             floor_norms.append(summary.norm)

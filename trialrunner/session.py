@@ -91,6 +91,8 @@ class Session:
         self._build = build
         self._wake = wake
         self._carry: Carry | None = None
+        self._wish = ""
+        """Why somebody asked for the pause or end that waits for the trial boundary."""
         self._job: UpdateJob | None = None
         self._before: list[PendingRequest] = []
         """Accepted requests that hold for the update of the trial under way."""
@@ -278,7 +280,11 @@ class Session:
 
     def _event(self, event: Event, cause: str) -> None:
         before = self.cycle
+        if event in (Event.PAUSE, Event.END):
+            self._wish = cause
         self.cycle, actions = step(before, event)
+        if self.cycle.state is State.PAUSED is not before.state:
+            cause = self._wish
         if self.cycle != before or actions:
             self._note_transition(before.state, event, cause)
         for action in actions:

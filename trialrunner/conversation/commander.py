@@ -47,10 +47,10 @@ class Commander:
     def idle(self) -> bool:
         return self._under_way is None and not self._queue
 
-    @property
-    def exhausted(self) -> bool:
-        """The message under way was sent max_tries times and never answered."""
-        return self._under_way is not None and self._tries > self._max_tries
+    def exhausted(self, now_ns: int) -> bool:
+        """The message under way was sent max_tries times and the last time went unanswered too."""
+        overdue = self._under_way is not None and now_ns >= self._again_ns
+        return overdue and self._tries >= self._max_tries
 
     @property
     def under_way(self) -> str:

@@ -200,7 +200,7 @@ class Conversation:
     def _trouble(self) -> str:
         """Why this session has no future; empty if it has."""
         timing = self._timing
-        if self._commander.exhausted:
+        if self._commander.exhausted(self._now_ns):
             return f"the rig does not answer {self._commander.under_way}"
         if self.greeted and self._now_ns - self._heard_ns > timing.silence_s * SECOND_NS:
             return f"nothing was heard from the rig for {timing.silence_s:g} s"
@@ -211,7 +211,9 @@ class Conversation:
 
     def next_wake_ns(self) -> int:
         """When `advance` is wanted next, if no frame comes before."""
-        wakes = [self._sent_ns + self._alive_interval_ns()]
+        wakes = [self._now_ns + SECOND_NS]
+        if self.greeted is not None:
+            wakes.append(self._sent_ns + self._alive_interval_ns())
         if self._halt is not None:
             wakes.append(self._halt_again_ns)
         if self._ping is not None:

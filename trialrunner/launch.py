@@ -8,7 +8,7 @@ import signal
 from collections.abc import Callable, Iterator
 from concurrent.futures import Executor, ThreadPoolExecutor
 from contextlib import ExitStack, contextmanager
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -17,13 +17,12 @@ import zmq
 from drivers.messages import Channel, StartMode
 from drivers.open import open_link
 from trialrunner import __version__
+from trialrunner.advancing import make_advancer
 from trialrunner.agreement import LimitsInForce, agree, limits_in_force
 from trialrunner.clock import Clock, SystemClock
 from trialrunner.config import Config, config_difference
 from trialrunner.conversation.events import Greeted
 from trialrunner.core.advance import Advancer
-from trialrunner.core.laws import LawContext
-from trialrunner.core.settings import RunSettings
 from trialrunner.core.trial import Array
 from trialrunner.daemon import Daemon, Waker
 from trialrunner.locks import hold_lock, link_lock_path
@@ -55,17 +54,6 @@ def keep_freed_memory() -> bool:
     )
 
 
-def settings_in_force(settings: RunSettings, limits: LimitsInForce) -> RunSettings:
-    """The settings with the tighter of the configuration's and the rig's limits."""
-    inputs = tuple(
-        replace(channel, low=float(low), high=float(high), rate_limit_per_s=float(rate))
-        for channel, low, high, rate in zip(
-            settings.inputs, limits.low, limits.high, limits.rate_per_s, strict=True
-        )
-    )
-    return replace(settings, inputs=inputs)
-
-
 @dataclass(frozen=True)
 class Builder:
     """Builds what needs the rig's greeting; called once, in the loop's thread."""
@@ -82,20 +70,9 @@ class Builder:
         channels = (*greeted.inputs, *greeted.outputs, *greeted.auxiliary)
         self._require_agreement(greeted, channels)
         limits = limits_in_force(self.config, channels)
-        settings = settings_in_force(self.config.run_settings(), limits)
         sample_type = greeted.greeting.sample_type
         reference = self.config.load_reference().astype(f"<{sample_type}").astype(np.float64)
-        context = LawContext(
-            period_s=settings.horizon.period_s,
-            n_samples=settings.horizon.n_samples,
-            n_inputs=len(settings.inputs),
-            n_outputs=len(settings.outputs),
-            reference=reference,
-            low=limits.low,
-            high=limits.high,
-            rate_per_s=limits.rate_per_s,
-        )
-        advancer = Advancer(settings, context, sample_type)
+        advancer = make_advancer(self.config.run_settings(), limits, reference, sample_type)
         intake = Intake(greeted, reference)
         writer = self._record(advancer, greeted, limits, reference)
         return Built(advancer, writer, intake, writer.state, writer.carry)

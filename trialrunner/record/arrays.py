@@ -91,8 +91,9 @@ def same_bits(one: AnyArray, two: AnyArray) -> bool:
         return True
     if one.dtype != two.dtype or one.shape != two.shape:
         return False
+    bits = np.dtype(f"u{one.dtype.itemsize}")
     left, right = np.ascontiguousarray(one), np.ascontiguousarray(two)
-    return bool(np.array_equal(left.view(np.uint8), right.view(np.uint8)))
+    return bool(np.array_equal(left.view(bits), right.view(bits)))
 
 
 def same_carry(one: Carry, two: Carry) -> bool:

@@ -8,6 +8,7 @@ from typing import Any
 
 import numpy as np
 
+from drivers.messages import Channel
 from trialrunner.agreement import LimitsInForce
 from trialrunner.conversation.events import Greeted
 from trialrunner.core.run_state import _plain, _read
@@ -56,6 +57,11 @@ class RunFacts:
 
     def limits_in_force(self) -> LimitsInForce:
         return LimitsInForce(**{name: np.array(values) for name, values in self.limits.items()})
+
+    def channels(self) -> tuple[Channel, ...]:
+        """The rig's channels of all roles as it declared them."""
+        roles = ("inputs", "outputs", "auxiliary")
+        return tuple(Channel(**values) for role in roles for values in self.rig.get(role, ()))
 
     def units(self, role: str) -> tuple[str, ...]:
         """UCUM codes of the rig's `inputs`, `outputs` or `auxiliary` channels, in its order."""

@@ -95,7 +95,8 @@ class StoredTable:
         if self.opened.streamed and index >= self._have:
             return None
         row = self._rows[index % len(self._rows)]
-        if self.opened.streamed:
+        if self.opened.streamed and index == self._played:
+            # Once a sample: it is looked up again if the other table ran dry at it.
             self._crc = _extend_crc(self._crc, row.tobytes())
             self._played = index + 1
         values: list[float] = row.tolist()

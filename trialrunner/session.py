@@ -88,6 +88,8 @@ class Session:
         self.finished = False
         self.exit_reason = ""
         """Empty after a normal end, else why the daemon left."""
+        self.halted_by = ""
+        """Why the run is halted, or was when the daemon left; empty otherwise."""
         self._build = build
         self._wake = wake
         self._carry: Carry | None = None
@@ -154,10 +156,13 @@ class Session:
         self._event(Event.END, cause)
 
     def abandon(self, why: str) -> None:
-        """An error that the loop cannot mend: tell the rig to stop, and go."""
+        """An error that the loop cannot mend: tell the rig to stop, or goodbye if it rests."""
         self.exit_reason = why
         if self.line.up:
-            self.line.talk.halt(STOP_CATEGORY, why)
+            if self.cycle.state is State.IDLE:
+                self.line.talk.close()
+            else:
+                self.line.talk.halt(STOP_CATEGORY, why)
             self.line.write()
         self._leave()
 
@@ -285,10 +290,18 @@ class Session:
         self.cycle, actions = step(before, event)
         if self.cycle.state is State.PAUSED is not before.state:
             cause = self._wish
+        if self.cycle.state is not before.state:
+            self._note_halt(before.state, cause)
         if self.cycle != before or actions:
             self._note_transition(before.state, event, cause)
         for action in actions:
             self._ACTIONS[action](self, cause)
+
+    def _note_halt(self, before: State, cause: str) -> None:
+        if self.cycle.state is State.HALTED:
+            self.halted_by = cause
+        elif before is State.HALTED and self.cycle.state is not State.IDLE:
+            self.halted_by = ""
 
     def _note_transition(self, before: State, event: Event, cause: str) -> None:
         self.observer.transition(before, event, self.cycle.state, cause)

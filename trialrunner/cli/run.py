@@ -43,7 +43,7 @@ def command(
         launch.catch_signals(running.waker)
         running.daemon.run()
         session = running.session
-    return result(session.exit_reason, session.state.over, session.state.halted)
+    return result(session.exit_reason, session.state.over, session.halted_by)
 
 
 def result(exit_reason: str, over: str, halted: str) -> int:

@@ -10,6 +10,9 @@ from drivers.framing import FrameSplitter, stuff
 from drivers.link import Link, Received
 
 READ_BYTES = 65536
+READS_PER_CALL = 16
+"""So much is taken in one call, so that a flood cannot hold the caller's loop."""
+
 STALL_S = 5.0
 """A line that takes no byte for this long is broken, whatever the driver says."""
 
@@ -45,14 +48,13 @@ class ByteLink(Link):
         self._require_open()
         if len(self._out) > limits.MAX_BACKLOG_BYTES:
             self._on_backlog()
-            return
         self._out += stuff(frame)
         self._count_out(len(frame))
 
     def receive(self) -> list[Received]:
         self._require_open()
         frames: list[bytes] = []
-        while True:
+        for _ in range(READS_PER_CALL):
             try:
                 data = os.read(self._fd, READ_BYTES)
             except BlockingIOError:
@@ -62,8 +64,6 @@ class ByteLink(Link):
             if not data:
                 raise LinkLost(f"{self.url}: the port was unplugged or closed by its other end")
             frames += self._splitter.feed(data)
-            if len(data) < READ_BYTES:
-                break
         self._count_in(frames)
         self._errors.update(self._splitter.errors)
         self._splitter.errors.clear()

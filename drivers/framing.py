@@ -34,10 +34,6 @@ class FrameSplitter:
         self._rest = rest
         return frames
 
-    def reset(self) -> None:
-        """Forget a frame that was begun."""
-        self._rest, self._skipping = b"", False
-
     def _unstuff(self, stuffed: bytes) -> bytes | None:
         if self._skipping:
             # The end of a run that was already counted as too long.

@@ -439,19 +439,30 @@ def decode(body: bytes) -> Message:
 
 
 def _unpack(body: bytes) -> list[Any]:
+    left = limits.MAX_LISTS
+
+    def count(values: list[Any]) -> list[Any]:
+        nonlocal left
+        left -= 1
+        if left < 0:
+            raise ValueError(f"over {limits.MAX_LISTS} arrays")
+        return values
+
     try:
         values = msgpack.unpackb(
             body,
             raw=False,
             strict_map_key=True,
-            max_array_len=64,
+            list_hook=count,
+            max_array_len=limits.MAX_LIST_ITEMS,
             max_map_len=0,
             max_ext_len=0,
             max_str_len=limits.MAX_TEXT_BYTES,
             max_bin_len=limits.MAX_MESSAGE_BODY_BYTES,
         )
-    except (ValueError, TypeError, RecursionError) as error:
-        raise WireError("packing", f"not one MessagePack array: {error!s:.80}") from None
+    except ValueError as error:
+        text = str(error) or type(error).__name__
+        raise WireError("packing", f"not one MessagePack array: {text:.80}") from None
     if type(values) is not list:
         raise WireError("packing", f"expected an array, found {type(values).__name__}")
     return values

@@ -21,9 +21,13 @@ _KINDS = {
 
 def open_link(url: str, role: str = DAEMON, clock: Callable[[], float] = time.monotonic) -> Link:
     """Open a link as the daemon or as the rig. Raises LinkError (LinkBusy if somebody has it)."""
-    scheme = urlsplit(url).scheme
-    if scheme not in _KINDS:
-        raise LinkError(f"{url}: unknown kind of link {scheme!r}; expected {', '.join(_KINDS)}")
+    try:
+        scheme = urlsplit(url).scheme
+    except ValueError as error:
+        raise LinkError(f"{url}: no address can be read from this: {error}") from None
+    if scheme not in _KINDS or (role == DAEMON and scheme == "pty"):
+        known = ", ".join(f"{kind}://" for kind in _KINDS if role == RIG or kind != "pty")
+        raise LinkError(f"{url}: no kind of link that a {role} opens; expected one of {known}")
     module, name = _KINDS[scheme]
     kind = getattr(importlib.import_module(module), name)
     link: Link = kind(url, role) if scheme.startswith("zmq") else kind(url, clock)

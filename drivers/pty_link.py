@@ -16,11 +16,8 @@ class PtyLink(ByteLink):
     """A serial line made of software. Like a UART it drops what nobody reads, and never blocks."""
 
     def __init__(self, url: str, clock: Clock = time.monotonic) -> None:
-        self._path = Path(urlsplit(url).path)
-        if not self._path.is_absolute() or self._path.name == "":
-            raise LinkError(f"{url}: expected pty:///path/of/a/new/link")
-        if self._path.exists() and not self._path.is_symlink():
-            raise LinkError(f"{url}: {self._path} exists and is no symbolic link; choose another")
+        self._path = _path(url)
+        # Its slave stays open: else reading the master fails whenever no daemon has it open.
         master, self._slave = pty.openpty()
         # Raw from the start: a terminal that echoes would answer the rig with its own bytes.
         tty.setraw(self._slave)
@@ -45,8 +42,9 @@ class PtyLink(ByteLink):
 
     def _drop(self) -> None:
         """Nobody reads: what waits is lost, as on a wire."""
-        self._errors["dropped"] += 1
+        self._errors["dropped"] += self._out.count(0)
         self._out.clear()
+        # Ends the frame of which a part is on the line already.
         self._out += b"\0"
         self._stalled_since = None
 
@@ -59,3 +57,16 @@ class PtyLink(ByteLink):
         with contextlib.suppress(OSError):
             if os.readlink(self._path) == self._name:
                 self._path.unlink()
+
+
+def _path(url: str) -> Path:
+    """Where the port shall appear. Raises LinkError, also where something else is in the way."""
+    path = Path(urlsplit(url).path)
+    if not path.is_absolute() or path.name == "":
+        raise LinkError(f"{url}: expected pty:///path/of/a/new/link")
+    # One that a rig which was killed has left behind may go, nothing else.
+    if path.is_symlink() and os.readlink(path).startswith("/dev/pts/"):
+        return path
+    if path.is_symlink() or path.exists():
+        raise LinkError(f"{url}: {path} exists and was not made by a rig; choose another path")
+    return path

@@ -2,8 +2,14 @@
 
 The daemon connects a DEALER, the rig binds a ROUTER and answers whom it greeted. Sockets carry no
 authentication: keep them on the loopback, on ipc in a private directory, or on a line of their own.
+A peer that sends one message of endless parts fills memory before this file sees any of it; only
+keeping strangers out helps against that.
 """
 
+import contextlib
+import errno
+import stat
+from collections import deque
 from pathlib import Path
 from urllib.parse import urlsplit
 
@@ -17,12 +23,22 @@ MAX_IPC_PATH = 107
 """Bytes of a Unix socket's path that the system allows."""
 
 HEARTBEAT_MS = 1000
+"""ZeroMQ's own; three missed ones end the connection, a stopped process is noticed like that."""
+
+HANDSHAKE_MS = 2000
 MAX_PEERS = 64
-RECEIVE_BATCH = 1000
-"""Frames taken in one call, so that a flood cannot hold the loop."""
+"""Peers that a rig tells apart; the one that was quiet for longest is forgotten first."""
+
+HIGH_WATER = 256
+"""Messages that ZeroMQ holds each way for a peer: 16 MiB of the largest blocks."""
+
+RECEIVE_BATCH = 256
+"""Frames taken in one call, so that a flood cannot hold the caller's loop."""
 
 
 class ZmqLink(Link):
+    """One end; `role` is "daemon" (DEALER, connects) or "rig" (ROUTER, binds)."""
+
     max_body = limits.MAX_MESSAGE_BODY_BYTES
     block_bytes = limits.MESSAGE_BLOCK_BYTES
 
@@ -30,9 +46,11 @@ class ZmqLink(Link):
         super().__init__()
         self.url = url
         self._router = role == "rig"
-        address = _address(url)
+        address = _address(url, self._router)
         self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
         self._socket = self._context.socket(zmq.ROUTER if self._router else zmq.DEALER)
+        self._queue: deque[list[bytes]] = deque()
+        self._queued_bytes = 0
         self._peers: dict[bytes, int] = {}
         self._unix_path = Path(address[6:]) if self._router and address.startswith("ipc") else None
         try:
@@ -40,12 +58,14 @@ class ZmqLink(Link):
             if self._router:
                 self._bind(address)
             else:
+                # Tells of the end of a connection that stood, not of one that was never made.
+                self._monitor = self._socket.get_monitor_socket(zmq.EVENT_DISCONNECTED)
                 self._socket.connect(address)
         except zmq.ZMQError as error:
-            self._destroy()
+            self._context.destroy(linger=0)
             raise _in_words(url, error) from None
         except LinkError:
-            self._destroy()
+            self._context.destroy(linger=0)
             raise
 
     def _configure(self) -> None:
@@ -53,11 +73,13 @@ class ZmqLink(Link):
         for option, value in (
             (zmq.LINGER, 0),
             (zmq.MAXMSGSIZE, self.max_body + overhead),
-            (zmq.SNDHWM, 1000),
-            (zmq.RCVHWM, 1000),
-            (zmq.HANDSHAKE_IVL, 2000),
+            (zmq.SNDHWM, HIGH_WATER),
+            (zmq.RCVHWM, HIGH_WATER),
+            (zmq.HANDSHAKE_IVL, HANDSHAKE_MS),
             (zmq.HEARTBEAT_IVL, HEARTBEAT_MS),
             (zmq.HEARTBEAT_TIMEOUT, 3 * HEARTBEAT_MS),
+            (zmq.IPV6, 1 if "[" in self.url else 0),
+            # Nothing is promised to a peer that is not there: what waits, waits in our own queue.
             (zmq.IMMEDIATE, 0 if self._router else 1),
         ):
             self._socket.setsockopt(option, value)
@@ -66,13 +88,14 @@ class ZmqLink(Link):
 
     def _bind(self, address: str) -> None:
         """A second bind of an ipc path silently steals it: ask first whether somebody listens."""
-        if self._unix_path is not None and self._unix_path.exists():
-            if _listens(self._unix_path):
-                raise LinkBusy(
-                    f"{self.url}: another program listens there; stop it or choose another"
-                )
-            self._unix_path.unlink()
+        if self._unix_path is not None:
+            _make_room(self.url, self._unix_path)
         self._socket.bind(address)
+        if self._unix_path is None and urlsplit(self.url).port == 0:
+            self.url = "zmq+" + self._socket.getsockopt_string(zmq.LAST_ENDPOINT).rstrip("\0")
+
+    def describe(self) -> str:
+        return f"{self.url}: ZeroMQ {zmq.zmq_version()}, {'bound' if self._router else 'connects'}"
 
     @property
     def pollable(self) -> zmq.Socket[bytes]:
@@ -80,21 +103,37 @@ class ZmqLink(Link):
 
     @property
     def wants_write(self) -> bool:
-        return False
+        return bool(self._queue)
 
     def send(self, frame: bytes, peer: int = 0) -> None:
         self._require_open()
-        head = [self._identity(peer)] if self._router else []
-        try:
-            self._socket.send_multipart([*head, frame], zmq.NOBLOCK)
-        except zmq.Again:
-            self._errors["not taken"] += 1
-            return
-        except zmq.ZMQError:
-            # The peer has gone or was never there; its silence is noticed by whoever waits.
-            self._errors["no peer"] += 1
-            return
+        if self._queued_bytes > limits.MAX_BACKLOG_BYTES:
+            self._on_backlog()
+        self._queue.append([self._identity(peer), frame] if self._router else [frame])
+        self._queued_bytes += len(frame)
         self._count_out(len(frame))
+        self.flush()
+
+    def _on_backlog(self) -> None:
+        """A rig goes on with what comes next, as a UART would; a daemon gives the line up."""
+        if not self._router:
+            raise LinkLost(f"{self.url}: the rig takes nothing; {self._queued_bytes} bytes wait")
+        self._errors["dropped"] += len(self._queue)
+        self._queue.clear()
+        self._queued_bytes = 0
+
+    def flush(self) -> bool:
+        self._require_open()
+        while self._queue:
+            try:
+                self._socket.send_multipart(self._queue[0], zmq.NOBLOCK)
+            except zmq.Again:
+                return False
+            except zmq.ZMQError:
+                # The peer has gone or was never there; its silence is noticed by whoever waits.
+                self._errors["no peer"] += 1
+            self._queued_bytes -= len(self._queue.popleft()[-1])
+        return True
 
     def receive(self) -> list[Received]:
         self._require_open()
@@ -108,6 +147,8 @@ class ZmqLink(Link):
                 raise LinkLost(f"{self.url}: receiving failed: {error}") from None
             if received is not None:
                 taken.append(received)
+        if not taken and not self._router and self._monitor.poll(0):
+            raise LinkLost(f"{self.url}: the connection to the rig broke")
         self._count_in([one.data for one in taken])
         return taken
 
@@ -117,7 +158,8 @@ class ZmqLink(Link):
         wanted = 2 if self._router else 1
         more, count = True, 0
         while more:
-            part = self._socket.recv(zmq.NOBLOCK if count == 0 else 0)
+            # The parts after the first are there with it, so that this never waits.
+            part = self._socket.recv(zmq.NOBLOCK)
             more = bool(self._socket.getsockopt(zmq.RCVMORE))
             count += 1
             if count <= wanted:
@@ -125,59 +167,70 @@ class ZmqLink(Link):
         if count != wanted:
             self._errors["parts"] += 1
             return None
-        peer = self._number(parts[0]) if self._router else 0
-        return Received(parts[-1], peer)
+        return Received(parts[-1], self._number(parts[0]) if self._router else 0)
 
     def _number(self, identity: bytes) -> int:
-        """A small number for a peer; the oldest is forgotten when there are too many."""
-        if identity not in self._peers:
-            if len(self._peers) >= MAX_PEERS:
-                self._peers.pop(next(iter(self._peers)))
+        """A small number for a peer, kept for as long as it is among the last to have spoken."""
+        number = self._peers.pop(identity, 0)
+        if not number:
             self._counts["peers"] += 1
-            self._peers[identity] = self._counts["peers"]
-        return self._peers[identity]
+            number = self._counts["peers"]
+            if len(self._peers) >= MAX_PEERS:
+                del self._peers[next(iter(self._peers))]
+        self._peers[identity] = number
+        return number
 
     def _identity(self, peer: int) -> bytes:
-        for identity, number in self._peers.items():
-            if number == peer:
-                return identity
-        return b"\0nobody"
-
-    def flush(self) -> bool:
-        self._require_open()
-        return True
+        """Most often that of the peer that spoke last."""
+        found = (one for one, number in reversed(self._peers.items()) if number == peer)
+        return next(found, b"\0nobody")
 
     def close(self) -> None:
-        if not self._socket.closed:
-            self._destroy()
-            if self._unix_path is not None:
-                self._unix_path.unlink(missing_ok=True)
-
-    def _destroy(self) -> None:
-        self._socket.close(0)
-        self._context.term()
+        if self._socket.closed:
+            return
+        self._context.destroy(linger=0)
+        if self._unix_path is not None:
+            with contextlib.suppress(OSError):
+                self._unix_path.unlink()
 
     def _require_open(self) -> None:
         if self._socket.closed:
             raise LinkLost(f"{self.url}: the link is closed")
 
 
-def _address(url: str) -> str:
+def _address(url: str, binds: bool) -> str:
     """The ZeroMQ address in a URL. Raises LinkError."""
     parts = urlsplit(url)
+    if parts.query or parts.fragment:
+        raise LinkError(f"{url}: a ZeroMQ link has no options; leave out what follows ? or #")
     if parts.scheme == "zmq+ipc":
         if len(parts.path.encode()) > MAX_IPC_PATH:
             raise LinkError(f"{url}: the path has over {MAX_IPC_PATH} bytes; choose a shorter one")
-        if not parts.path.startswith("/") or parts.netloc:
+        if len(parts.path) < 2 or parts.netloc:
             raise LinkError(f"{url}: expected zmq+ipc:///path, with three slashes")
         return f"ipc://{parts.path}"
     try:
         port = parts.port
     except ValueError:
         port = None
-    if port is None or not parts.hostname:
+    # Port 0 is any free one, which only the side that binds can have.
+    if port is None or not parts.hostname or parts.path or (port == 0 and not binds):
         raise LinkError(f"{url}: expected zmq+tcp://host:port")
     return f"tcp://{parts.netloc}"
+
+
+def _make_room(url: str, path: Path) -> None:
+    """Remove the socket that a killed rig left behind. Raises LinkError for anything else."""
+    try:
+        mode = path.lstat().st_mode
+    except OSError:
+        return
+    if not stat.S_ISSOCK(mode):
+        raise LinkError(f"{url}: {path} exists and is no socket; choose another path")
+    if _listens(path):
+        raise LinkBusy(f"{url}: another program listens there; stop it or choose another path")
+    with contextlib.suppress(OSError):
+        path.unlink()
 
 
 def _listens(path: Path) -> bool:
@@ -191,7 +244,17 @@ def _listens(path: Path) -> bool:
         return True
 
 
+_REMEDIES = {
+    zmq.EADDRNOTAVAIL: "that address is none of this machine; see `ip address`",
+    errno.ENODEV: "that address is none of this machine; see `ip address`",
+    errno.ENOENT: "the directory does not exist; make it first",
+    errno.EACCES: "no permission; choose a directory or port that your user may use",
+}
+"""Plain words for what binding and connecting fail with."""
+
+
 def _in_words(url: str, error: zmq.ZMQError) -> LinkError:
-    if error.errno == zmq.EADDRINUSE:
-        return LinkBusy(f"{url}: another program listens there; stop it or choose another")
-    return LinkError(f"{url}: {zmq.strerror(error.errno or 0)}")
+    number = error.errno or 0
+    if number == zmq.EADDRINUSE:
+        return LinkBusy(f"{url}: another program listens there; stop it or choose another address")
+    return LinkError(f"{url}: {_REMEDIES.get(number, zmq.strerror(number))}")

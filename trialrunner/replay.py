@@ -180,10 +180,10 @@ class Replay:
         self._then = recorded.summary.state
         self._then_carry = self._reader.carry_at(recorded.summary.entry) or self._then_carry
         if not counterfactual and self.counterfactual_from is None:
+            self._compare_actions(index, recorded, side)
             self._compare_states("afterwards", index + 1)
             differences += self._noted
             self._noted = []
-            self._compare_actions(index, recorded, side)
         return ReplayedTrial(
             index, _recorded_side(recorded), side, (*noted, *differences), counterfactual
         )

@@ -31,7 +31,8 @@ class RecordBusy(Busy, RecordError):
     """Another process writes the record."""
 
 
-_PERMISSION = ("readonly", "unable to open", "attempt to write")
+PERMISSION = ("readonly", "unable to open")
+"""Words of SQLite where it may not read or write, or not make a file beside the record."""
 
 
 def in_words(path: Path, error: sqlite3.Error | OSError) -> RecordError:
@@ -45,7 +46,7 @@ def in_words(path: Path, error: sqlite3.Error | OSError) -> RecordError:
         )
     if isinstance(error, FileNotFoundError):
         return RecordUnwritable(f"{path}: its directory does not exist; create it")
-    if isinstance(error, PermissionError) or any(words in text for words in _PERMISSION):
+    if isinstance(error, PermissionError) or any(words in text for words in PERMISSION):
         return RecordUnwritable(
             f"{path}: cannot be opened or written ({text}); check the permissions of the file and "
             "of its directory"
@@ -60,6 +61,6 @@ def in_words(path: Path, error: sqlite3.Error | OSError) -> RecordError:
             "writer"
         )
     return RecordUnwritable(
-        f"{path}: {text}; every committed trial is safe, this process writes no more. Check the "
-        "disk, then start the same configuration again"
+        f"{path}: {text}; every committed trial is safe. Check the disk, then start the same "
+        "configuration again"
     )

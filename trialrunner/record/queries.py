@@ -9,7 +9,13 @@ from trialrunner.core.errors import CoreError
 from trialrunner.core.run_state import Carry, RunState
 from trialrunner.core.trial import Array
 from trialrunner.record import arrays
-from trialrunner.record.errors import NotARecord, RecordDamaged, RecordUnwritable, in_words
+from trialrunner.record.errors import (
+    PERMISSION,
+    NotARecord,
+    RecordDamaged,
+    RecordUnwritable,
+    in_words,
+)
 from trialrunner.record.rows import RunFacts
 from trialrunner.record.schema import APPLICATION_ID, SCHEMA_VERSION
 
@@ -23,6 +29,8 @@ def require_ours(path: Path) -> None:
     """Raise NotARecord unless the file is a record that this version reads."""
     if not path.exists():
         raise RecordUnwritable(f"{path}: there is no such record")
+    if not path.is_file():
+        raise NotARecord(f"{path}: is not a file; name the record itself")
     try:
         db = read_only(path)
         try:
@@ -54,7 +62,8 @@ def read_only(path: Path) -> sqlite3.Connection:
     except sqlite3.OperationalError as error:
         db.close()
         log = path.with_name(path.name + "-wal")
-        if "unable to open" not in str(error) or (log.exists() and log.stat().st_size):
+        refused = any(words in str(error) for words in PERMISSION)
+        if not refused or (log.exists() and log.stat().st_size):
             raise
         # A finished record on a read-only medium: nobody can be writing it.
         return _connect(uri + "&immutable=1")

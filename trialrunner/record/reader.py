@@ -14,7 +14,7 @@ import numpy as np
 from trialrunner.core.run_state import Carry, RunState
 from trialrunner.core.trial import Array, Level, Purpose, Trial, Verdict
 from trialrunner.record import arrays, queries, verify
-from trialrunner.record.errors import in_words
+from trialrunner.record.errors import RecordDamaged, in_words
 from trialrunner.record.rows import DaemonRow, RequestRow, Transition
 from trialrunner.record.schema import COLUMNS
 
@@ -234,6 +234,9 @@ class RecordReader:
         feedforward = self._ask(
             lambda: queries.array(self._db, summary.carry_entry, arrays.FEEDFORWARD)
         )
+        for name in ("output", "start_state"):
+            if name not in stored:
+                raise RecordDamaged(f"trial {summary.index}: the array {name} is missing")
         limited, auxiliary = stored.get("limited"), stored.get("auxiliary")
         trial = Trial(
             index=summary.index,

@@ -153,7 +153,9 @@ class Limits:
 
     def _inside(self, sent: Array, previous: Array | None, low: Array, high: Array) -> Mask:
         """(n_inputs,): channels that need nothing but rounding."""
-        smallest, largest = sent.min(axis=0), sent.max(axis=0)
+        # Reductions along a short last axis are ten times slower: one channel a row.
+        rows = np.ascontiguousarray(sent.T)
+        smallest, largest = rows.min(axis=1), rows.max(axis=1)
         if not np.all(np.isfinite(smallest) & np.isfinite(largest)):
             n_bad = int(np.count_nonzero(~np.isfinite(sent)))
             raise CoreError(
@@ -164,9 +166,9 @@ class Limits:
         inside &= ~self._pin_start | (sent[0] == 0.0)
         inside &= ~self._pin_end | (sent[-1] == 0.0)
         if len(sent) > 1 and np.any(np.isfinite(self._rate)):
-            inside &= _sizes(np.diff(sent, axis=0)) <= self._rate
+            inside &= _sizes(rows[:, 1:] - rows[:, :-1]) <= self._rate
         if previous is not None and np.any(np.isfinite(self._change_cap)):
-            inside &= _sizes(sent - previous) <= self._change_cap
+            inside &= _sizes(rows - previous.T) <= self._change_cap
         return inside
 
     def _limit(
@@ -264,8 +266,8 @@ def _size(signal: Array) -> float:
 
 
 def _sizes(signal: Array) -> Array:
-    """(n_channels,): largest magnitude of each column."""
-    return np.asarray(np.maximum(signal.max(axis=0), -signal.min(axis=0)))
+    """(n_channels,): largest magnitude of each row."""
+    return np.asarray(np.maximum(signal.max(axis=1), -signal.min(axis=1)))
 
 
 def _closeness(bound: Array) -> Array:

@@ -5,8 +5,8 @@
 Floors, measured in the same run and interleaved: one rfft + irfft of the padded length for the law
 and one for the filter (each over all channels), and a raw write + fdatasync of the bytes that the
 commit stores. The turn-around takes what the daemon takes: unpacking the last block, checking the
-whole trial, guards, law, filter, limits, wire rounding, the commit, the next table and its checksum,
-up to the first frame of it.
+whole trial, guards, law, filter, limits, wire rounding, the commit, and the next table
+with its checksum, up to the first frame of it.
 """
 
 import os

@@ -112,11 +112,9 @@ def judge(folder: Path, readings: list[tuple[int, int, int]], trials: int, took_
     with RecordReader(folder / "soak.trialrecord") as reader:
         count, state = reader.n_trials, reader.last_state()
         damage = reader.verify()
-    print(
-        f"{count} trials in {took_s:.0f} s ({1e3 * took_s / count:.1f} ms each), {state.voids} void; "
-        f"resident memory grew by {100 * growth:.2f} % after the first tenth; the run: {state.over}; "
-        f"record {'sound' if not damage else damage[0]}"
-    )
+    print(f"{count} trials in {took_s:.0f} s, {1e3 * took_s / count:.1f} ms each")
+    print(f"{state.voids} void; the run: {state.over}; record: {damage or 'sound'}")
+    print(f"resident memory grew by {100 * growth:.2f} % after the first tenth")
     return 0 if growth <= ALLOWED and count >= trials and not damage else 1
 
 

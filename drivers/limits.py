@@ -34,17 +34,14 @@ MAX_SAMPLES = 16_000_000
 MAX_RANGES = 24
 """Gaps named in one resend request or table state; more are named in the next one."""
 
-MAX_LISTS = 2 + MAX_RANGES
-"""Arrays in one MessagePack body: the message, a list in it, the items of that list. A megabyte of
+MAX_LISTS = 64
+"""Arrays in one MessagePack body, of which no message has more than 2 + MAX_RANGES. A megabyte of
 empty arrays would else become 65 megabytes of objects before any field is looked at."""
 
 MAX_LIST_ITEMS = 64
 """Items of one array: more than any message has fields or any field has items."""
 
 MAX_TICK_HZ = 1_000_000_000
-MAX_BACKLOG_FRAMES = 100_000
-"""Frames a link holds for a reader that does not read, before it calls the line broken."""
-
 MAX_BACKLOG_BYTES = 1 << 20
 """Bytes that a link's own queue holds: seconds of the fastest serial line; bulk is sent block by
 block while the line is idle, so that only a dead line gets here."""

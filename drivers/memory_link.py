@@ -9,6 +9,10 @@ from drivers import limits
 from drivers.errors import LinkLost
 from drivers.link import Link, Received
 
+MAX_HELD_BYTES = 64 << 20
+"""What waits for a reader that does not read before the line counts as broken; as much as ZeroMQ
+and the system hold for one of its links."""
+
 Fault = Callable[[bytes], Iterable[bytes]]
 """What arrives of a frame: nothing (lost), the frame twice, other bytes..."""
 
@@ -24,6 +28,7 @@ class MemoryLink(Link):
         self.url = f"memory://{name}"
         self.fault: Fault = lambda frame: (frame,)
         self._inbox: deque[bytes] = deque()
+        self._held_bytes = 0
         self._other: MemoryLink | None = None
 
     @classmethod
@@ -44,14 +49,17 @@ class MemoryLink(Link):
     def send(self, frame: bytes, peer: int = 0) -> None:
         other = self._require_open()
         self._count_out(len(frame))
-        other._inbox.extend(self.fault(frame))
-        if len(other._inbox) > limits.MAX_BACKLOG_FRAMES:
+        if other._held_bytes > MAX_HELD_BYTES:
             raise LinkLost(f"{self.url}: the other end does not read")
+        for arriving in self.fault(frame):
+            other._inbox.append(arriving)
+            other._held_bytes += len(arriving)
 
     def receive(self) -> list[Received]:
         self._require_open()
         frames = list(self._inbox)
         self._inbox.clear()
+        self._held_bytes = 0
         self._count_in(frames)
         return [Received(frame) for frame in frames]
 

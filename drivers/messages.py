@@ -457,7 +457,7 @@ def _unpack(body: bytes) -> list[Any]:
             max_array_len=limits.MAX_LIST_ITEMS,
             max_map_len=0,
             max_ext_len=0,
-            max_str_len=limits.MAX_TEXT_BYTES,
+            max_str_len=limits.MAX_MESSAGE_BODY_BYTES,
             max_bin_len=limits.MAX_MESSAGE_BODY_BYTES,
         )
     except ValueError as error:

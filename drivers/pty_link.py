@@ -61,8 +61,9 @@ class PtyLink(ByteLink):
 
 def _path(url: str) -> Path:
     """Where the port shall appear. Raises LinkError, also where something else is in the way."""
-    path = Path(urlsplit(url).path)
-    if not path.is_absolute() or path.name == "":
+    parts = urlsplit(url)
+    path = Path(parts.path)
+    if parts.netloc or parts.query or not path.is_absolute() or path.name == "":
         raise LinkError(f"{url}: expected pty:///path/of/a/new/link")
     # One that a rig which was killed has left behind may go, nothing else.
     if path.is_symlink() and os.readlink(path).startswith("/dev/pts/"):

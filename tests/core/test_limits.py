@@ -10,7 +10,7 @@ from hypothesis import strategies as st
 
 from trialrunner.core.errors import CoreError, SettingError, ShapeError
 from trialrunner.core.limits import Limits, quantise
-from trialrunner.core.rate_limit import bands, clamp_rate, envelope
+from trialrunner.core.rate_limit import bands, clamp_rate, envelope, envelope_where_needed
 from trialrunner.core.trial import Array
 
 METHODS = ("clamp", "envelope", "projection")
@@ -352,3 +352,14 @@ def test_a_wish_of_the_wrong_shape_is_refused() -> None:
     """Expected and found shapes are named."""
     with pytest.raises(ShapeError, match=r"expected shape \(10, 1\), found \(9, 1\)"):
         make_limits(10).apply(np.zeros((9, 1)))
+
+
+@given(signals(), st.sampled_from([0.003, 0.05, 0.7, 20.0]), st.integers(0, 2))
+def test_the_envelope_round_the_breaks_is_the_envelope_of_the_whole(
+    goal: Array, share: float, quiet: int
+) -> None:
+    """Whole numbers, as the limits use it; with long stretches that need nothing."""
+    rest = np.zeros(quiet * 500)
+    goal = np.rint(np.clip(np.concatenate((rest, goal, rest)), -1e6, 1e6) * 1e3)
+    rate = max(1.0, np.floor(share * (np.max(np.abs(goal)) + 1.0)))
+    np.testing.assert_array_equal(envelope_where_needed(goal, rate), envelope(goal, rate))

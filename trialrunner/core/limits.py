@@ -21,7 +21,7 @@ import numpy as np
 from trialrunner.core.errors import CoreError, SettingError, require_shape
 from trialrunner.core.laws import LawContext
 from trialrunner.core.projection import project
-from trialrunner.core.rate_limit import clamp_rate, envelope
+from trialrunner.core.rate_limit import clamp_rate, envelope_where_needed
 from trialrunner.core.settings import RunSettings
 from trialrunner.core.trial import Array, Mask
 
@@ -216,7 +216,7 @@ class Limits:
         """Whole numbers in, whole numbers out: rounding a signal that keeps a whole rate and whole
         bounds to whole numbers keeps them, because rounding is monotone."""
         if self._method == "envelope":
-            return np.floor(envelope(np.clip(goal, lower, upper), rate))
+            return np.floor(envelope_where_needed(np.clip(goal, lower, upper), rate))
         if self._method == "projection":
             goal = np.floor(project(goal, lower, upper, rate) + 0.5)
         # The clamp changes a projected signal only where rounding errors met a tie.

@@ -4,7 +4,10 @@ Both take one channel, (n_samples,), that already lies within bounds which thems
 rate; then so does the result. Neither allocates more than a few arrays of that length.
 """
 
+import math
+
 import numpy as np
+from numpy.typing import NDArray
 
 from trialrunner.core.trial import Array
 
@@ -82,6 +85,41 @@ def envelope(goal: Array, rate: float) -> Array:
     """
     below, above = bands(goal, rate)
     return (below + above) / 2.0
+
+
+def envelope_where_needed(goal: Array, rate: float) -> Array:
+    """`envelope`, computed only around the samples at which `goal` breaks the rate.
+
+    A sample further than 2 max|goal| / rate from every break is its own envelope: reaching another
+    one within the rate would take longer. So windows of twice that reach round the breaks give the
+    same values, and a signal that is cut at its ends alone costs next to nothing.
+    """
+    broken = np.flatnonzero(np.abs(np.diff(goal)) > rate)
+    if broken.size == 0:
+        return goal
+    size = float(np.max(np.abs(goal)))
+    if broken.size > MOST_BREAKS or not 4.0 * size < rate * len(goal):
+        return envelope(goal, rate)
+    reach = 2 * (math.ceil(2.0 * size / rate) + 1)
+    limited = goal.copy()
+    for start, end in _windows(broken, reach, len(goal)):
+        limited[start:end] = envelope(goal[start:end], rate)
+    return limited
+
+
+MOST_BREAKS = 200
+"""Beyond so many breaks the windows cost more than the whole signal at once."""
+
+
+def _windows(broken: NDArray[np.intp], reach: int, n_samples: int) -> list[tuple[int, int]]:
+    """Stretches of samples within `reach` of a break, merged where they touch."""
+    merged: list[tuple[int, int]] = []
+    for k in broken.tolist():
+        start, end = max(0, k - reach), min(n_samples, k + reach + 2)
+        if merged and start <= merged[-1][1]:
+            start = merged.pop()[0]
+        merged.append((start, end))
+    return merged
 
 
 def _largest_below(goal: Array, ramp: Array) -> Array:

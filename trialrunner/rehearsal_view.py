@@ -8,6 +8,7 @@ from typing import Any
 
 from rich.console import Console
 from rich.live import Live
+from rich.padding import Padding
 from rich.table import Table
 from rich.text import Text
 
@@ -15,6 +16,9 @@ from trialrunner.rehearsal import FLOORS, Progress, Summary
 
 BAR_WIDTH = 26
 """Letters of the error bar."""
+
+INDENT = 7
+"""Columns before an explanation: under the error norm."""
 
 DECADES = 3.0
 """Decades of error that the bar spans, from the first error downwards."""
@@ -55,8 +59,14 @@ class TrialLines:
         elif message.topic == "trial":
             self._header()
             self._console.print(self._line(message.values))
-        elif message.topic == "event" and message.values.get("kind") in ("link", "halt"):
-            self._console.print(Text(f"  {message.values['text']}", style="yellow"))
+            if message.values["void"] or message.values["verdict"] != "pass":
+                self._explain(message.values["sentence"])
+        elif message.topic == "event" and message.values.get("kind") == "link":
+            self._explain(message.values["text"])
+
+    def _explain(self, text: str) -> None:
+        """Under the line that it explains, wrapped and indented."""
+        self._console.print(Padding(Text(text, style="yellow"), (0, 2, 0, INDENT)))
 
     def _header(self) -> None:
         if not self._header_shown:
@@ -72,8 +82,6 @@ class TrialLines:
         line.append(f"{_bar(norm, self._first):<{BAR_WIDTH}}", style="cyan")
         word = "void" if trial["void"] else trial["verdict"]
         line.append(f"  {word}", style="green" if word == "pass" else "bold yellow")
-        if word != "pass":
-            line.append(f"  {trial['sentence']}", style="yellow")
         return line
 
     def footer(self) -> Text:
@@ -83,11 +91,10 @@ class TrialLines:
         left = status.get("remaining_s")
         left_text = "" if left is None else f", about {left:.0f} s left"
         learning = "learning" if status["learning"] else f"frozen by {status['frozen_by']}"
-        return Text(
-            f"  trial {status['trial']} of {status['trials_total']} ({status['purpose']}), "
-            f"{status['state']}, {learning}, {status['voids']} void{left_text}",
-            style="dim",
-        )
+        where = f"trial {status['trial']} of {status['trials_total']}, {learning}"
+        if status["purpose"] == "floor":
+            where, left_text = f"trial {status['trial']}, repeated to measure the floor", ""
+        return Text(f"  {where}, {status['state']}, {status['voids']} void{left_text}", style="dim")
 
 
 def summary_table(result: Summary) -> Table:

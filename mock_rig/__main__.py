@@ -10,8 +10,10 @@ from typing import Any
 import click
 import numpy as np
 import zmq
+from numpy.typing import NDArray
 
 from drivers.errors import DriverError, LinkLost
+from drivers.limits import MAX_SAMPLES
 from drivers.link import Link
 from drivers.open import RIG, open_link
 from mock_rig.faults import KINDS, FaultScript, FaultSpecError
@@ -21,17 +23,22 @@ from mock_rig.responder import Responder
 from mock_rig.runner import Crash
 
 EXIT_LINK = 4
+AGAIN_S = 0.1
+"""After this time a line that broke is opened again."""
 
-FAULT_HELP = "\n".join(
-    f"  {kind:15s} {meaning} ({size:g})" for kind, (size, meaning) in KINDS.items()
-)
+FAULT_HELP = "\n".join(f"  {kind:15s} {row.meaning} ({row.size:g})" for kind, row in KINDS.items())
+
+
+SAMPLES = click.IntRange(1, MAX_SAMPLES)
 
 
 @click.command(
-    help="A rig made of software.\n\nExit codes: 0 stopped by a signal, 2 wrong arguments, "
-    f"{EXIT_LINK} the link cannot be opened.",
-    epilog="\b\nFaults, written KIND@trial=N, KIND@from=N or KIND@p=X, then ,size=S:\n"
-    + FAULT_HELP,
+    help="A rig made of software, for rehearsals.\n\nPrints one line of JSON each time it "
+    "listens: what it listens on and what a daemon connects to.\n\nExit codes: 0 stopped by "
+    f"a signal, 2 wrong arguments, {EXIT_LINK} the link cannot be opened.",
+    epilog="\b\nFaults, written KIND@trial=N (in that trial), KIND@from=N (from then on) or\n"
+    "KIND@p=X (in each trial with that probability), then ,size=S if the default in\n"
+    "brackets does not fit:\n" + FAULT_HELP,
 )
 @click.option("--plant", type=click.Choice(list(PLANTS)), default="bead_axis", show_default=True)
 @click.option(
@@ -44,18 +51,20 @@ FAULT_HELP = "\n".join(
 @click.option("--fault", "faults", multiple=True, metavar="SPEC", help="See below; repeatable.")
 @click.option("--rig-starts", is_flag=True, help="Start armed trials itself.")
 @click.option("--sample-type", type=click.Choice(["f4", "f8"]), default="f4", show_default=True)
-@click.option("--table-capacity", default=200_000, show_default=True, help="Samples.")
-@click.option("--max-samples", default=2_000_000, show_default=True)
-@click.option("--watchdog-ms", default=1000, show_default=True)
+@click.option("--table-capacity", type=SAMPLES, default=200_000, show_default=True, help="Samples.")
+@click.option("--max-samples", type=SAMPLES, default=2_000_000, show_default=True)
+@click.option("--watchdog-ms", type=click.IntRange(10, 600_000), default=1000, show_default=True)
 @click.option("--keep-nothing", is_flag=True, help="Refuse every resend request.")
 @click.option(
-    "--reference", type=click.Path(exists=True, dir_okay=False), help="NPY file: own reference."
+    "--reference",
+    type=click.Path(exists=True, dir_okay=False),
+    help="NPY file, (samples, outputs): the rig then owns the reference.",
 )
 def main(plant: str, link: str, seed: int, faults: tuple[str, ...], **options: Any) -> None:
     try:
         script = FaultScript(faults, seed)
-        chosen = _options(options, seed)
-    except (FaultSpecError, ValueError, OSError) as error:
+        chosen = _options(options, plant, seed)
+    except (FaultSpecError, ReferenceUnreadable) as error:
         raise click.UsageError(str(error)) from None
     signal.signal(signal.SIGTERM, lambda *_: sys.exit(0))
     signal.signal(signal.SIGINT, lambda *_: sys.exit(0))
@@ -66,9 +75,34 @@ def main(plant: str, link: str, seed: int, faults: tuple[str, ...], **options: A
         sys.exit(EXIT_LINK)
 
 
-def _options(options: dict[str, Any], seed: int) -> RigOptions:
+class ReferenceUnreadable(Exception):
+    """The file of the rig's own reference; says what was expected."""
+
+
+def _reference(path: str, plant: str) -> NDArray[np.float64]:
+    """Raises ReferenceUnreadable."""
+    n_outputs = len(PLANTS[plant](0).outputs)
+    try:
+        found = np.load(Path(path), allow_pickle=False)
+    except OSError as error:
+        raise ReferenceUnreadable(f"{path}: {error.strerror}") from None
+    except (ValueError, EOFError):
+        raise ReferenceUnreadable(f"{path}: expected an NPY file, found something else") from None
+    if not isinstance(found, np.ndarray) or found.dtype.kind not in "fiu":
+        raise ReferenceUnreadable(f"{path}: expected an NPY file with one array of numbers")
+    values = found.astype(np.float64)
+    if values.ndim != 2 or values.shape[1] != n_outputs or not 0 < len(values) <= MAX_SAMPLES:
+        raise ReferenceUnreadable(
+            f"{path}: shape {values.shape}; {plant} needs (samples, {n_outputs})"
+        )
+    if not np.isfinite(values).all():
+        raise ReferenceUnreadable(f"{path}: holds values that are not finite")
+    return values
+
+
+def _options(options: dict[str, Any], plant: str, seed: int) -> RigOptions:
     path = options["reference"]
-    reference = None if path is None else np.load(Path(path), allow_pickle=False).astype(float)
+    reference = None if path is None else _reference(path, plant)
     return RigOptions(
         fast=not options["real_time"],
         rig_starts=options["rig_starts"],
@@ -86,7 +120,9 @@ def serve(plant: str, url: str, options: RigOptions, script: FaultScript) -> Non
     """Until a signal comes; a crash closes the link and comes back as a rig that knows nothing."""
     while True:
         link = open_link(url, RIG)
-        print(json.dumps({"listening": url, "plant": plant, "is": link.describe()}), flush=True)
+        # A port that the system chose stays the same when the rig comes back.
+        url = link.url
+        print(json.dumps(_announcement(link, plant)), flush=True)
         rig = Responder(
             PLANTS[plant](options.seed),
             options,
@@ -100,27 +136,33 @@ def serve(plant: str, url: str, options: RigOptions, script: FaultScript) -> Non
         except Crash as crash:
             link.close()
             time.sleep(crash.away_s)
-            # What killed it once would kill it for ever.
-            script = FaultScript(
-                [s for s in script.texts if not s.startswith("crash")], options.seed
-            )
+            script = script.without_struck("crash")
         except LinkLost as lost:
             click.echo(f"mock_rig: {lost}", err=True)
             link.close()
-            time.sleep(0.1)
+            time.sleep(AGAIN_S)
         finally:
             link.close()
+
+
+def _announcement(link: Link, plant: str) -> dict[str, str]:
+    """A pseudo-terminal is made by the rig; to the daemon it is a serial port."""
+    url = link.url
+    connect = "serial" + url.removeprefix("pty") if url.startswith("pty:") else url
+    return {"listening": url, "connect": connect, "plant": plant, "is": link.describe()}
 
 
 def _loop(link: Link, rig: Responder) -> None:
     poller = zmq.Poller()
     while True:
         poller.register(link.pollable, zmq.POLLIN | (zmq.POLLOUT if link.wants_write else 0))
-        wait_ns = rig.next_wake_ns(time.monotonic_ns()) - time.monotonic_ns()
+        now_ns = time.monotonic_ns()
+        wait_ns = rig.next_wake_ns(now_ns, room=not link.wants_write) - now_ns
         poller.poll(max(0, -(-wait_ns // 1_000_000)))
+        link.flush()
         for data, peer in link.receive():
             rig.receive(data, peer, time.monotonic_ns())
-        rig.advance(time.monotonic_ns())
+        rig.advance(time.monotonic_ns(), room=not link.wants_write)
         for frame, peer in rig.outgoing(time.monotonic_ns()):
             link.send(frame, peer)
         link.flush()

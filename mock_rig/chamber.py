@@ -26,9 +26,9 @@ class Chamber:
     period_ticks = PERIOD_TICKS
     inject = "actuator"
     return_s = 1800.0
-    inputs = (ChannelInfo("heater_power", "W", -300.0, 300.0, 50.0),)
-    outputs = (ChannelInfo("chamber_temperature", "Cel", -20.0, 120.0),)
-    auxiliary = (
+    inputs: tuple[ChannelInfo, ...] = (ChannelInfo("heater_power", "W", -300.0, 300.0, 50.0),)
+    outputs: tuple[ChannelInfo, ...] = (ChannelInfo("chamber_temperature", "Cel", -20.0, 120.0),)
+    auxiliary: tuple[ChannelInfo, ...] = (
         ChannelInfo("power_limited", "1", 0.0, 1.0, meaning="limited"),
         ChannelInfo("ambient_temperature", "Cel", -20.0, 60.0),
     )

@@ -46,7 +46,7 @@ from mock_rig.options import RigOptions
 from mock_rig.plant import TICK_HZ, ChannelInfo, Plant
 from mock_rig.runner import Runner
 from mock_rig.sender import Sender
-from mock_rig.tables import StoredTable
+from mock_rig.tables import RowLimits, StoredTable
 
 Handler = Callable[[Message, int, int], Message]
 
@@ -72,6 +72,8 @@ class Responder:
         self.tables: dict[Table, StoredTable] = {}
         self.runner = Runner(self, script, block_bytes)
         self._max_body = max_body
+        self._resting = False
+        """After Bye: nothing is said, and only Hello is heard."""
         self._last = 0
         self._stored: Message | None = None
         self._heard_ns = now_ns
@@ -100,14 +102,21 @@ class Responder:
             return
         if isinstance(message, Hello):
             self._on_hello(message, frame, peer, now_ns)
-        elif not self.sender.session or frame.session != self.sender.session:
+        elif self.sender.session is None or frame.session != self.sender.session:
             self.errors["session"] += 1
+        elif isinstance(message, NUMBERED):
+            self._hear(peer, now_ns)
+            self._on_numbered(message, frame.sequence, now_ns)
+        elif self._resting:
+            self.errors["resting"] += 1
         else:
-            self._heard_ns = now_ns
-            if isinstance(message, NUMBERED):
-                self._on_numbered(message, frame.sequence, now_ns)
-            else:
-                self._on_unnumbered(message, now_ns)
+            self._hear(peer, now_ns)
+            self._on_unnumbered(message, now_ns)
+
+    def _hear(self, peer: int, now_ns: int) -> None:
+        """A frame of the session; its peer may have another number after it connected anew."""
+        self._heard_ns = now_ns
+        self.sender.peer = peer
 
     def _on_numbered(self, message: Message, number: int, now_ns: int) -> None:
         """Last + 1 is carried out, last is answered again, everything else is ignored."""
@@ -115,6 +124,8 @@ class Responder:
             self.sender.send(self._stored, now_ns)
         elif number != self._last + 1:
             self.errors["number"] += 1
+        elif self._resting:
+            self.errors["resting"] += 1
         else:
             answer = self._handlers[type(message)](message, number, now_ns)
             self._last, self._stored = number, answer
@@ -129,37 +140,45 @@ class Responder:
                 self._on_block(message, now_ns)
             case Halt():
                 self.runner.go_safe(FaultCode.HALTED, FinishReason.HALTED, message.text, now_ns)
+                # It is repeated until a heartbeat says so: the last one may have been lost.
+                self.beat(now_ns)
             case Alive():
                 pass
             case _:
                 self.errors["wrong direction"] += 1
 
     def _on_hello(self, message: Hello, frame: Frame, peer: int, now_ns: int) -> None:
-        repeated = frame.session == self.sender.session and peer == self.sender.peer
-        if repeated:
+        if frame.sequence != 1:
+            self.errors["number"] += 1
+            return
+        if frame.session == self.sender.session and peer == self.sender.peer:
             if self._last == 1 and self._stored is not None:
                 self.sender.send(self._stored, now_ns)
             return
-        alive = now_ns - self._heard_ns < self.options.watchdog_ms * 1_000_000
-        if self.sender.session and peer != self.sender.peer and alive:
-            text = "a session with another daemon is alive"
-            refused = Refused(frame.sequence, Refusal.BUSY, text)
-            self.sender.send(refused, now_ns, frame.session, peer)
-            return
         common = set(message.versions) & set(self.options.versions)
-        if not common:
+        refused = None
+        if peer != self.sender.peer and self._alive(now_ns):
+            refused = Refused(1, Refusal.BUSY, "a session with another daemon is alive")
+        elif not common:
             spoken = ", ".join(map(str, self.options.versions))
             refused = Refused(1, Refusal.VERSION, f"this rig speaks protocol version {spoken}")
+        if refused is not None:
             self.sender.send(refused, now_ns, frame.session, peer)
             return
         self.sender.forget()
         self.sender.session, self.sender.peer = frame.session, peer
-        self._heard_ns = now_ns
+        self._heard_ns, self._resting = now_ns, False
         self.tables.clear()
-        self.runner.new_session(now_ns)
         self._last, self._stored = 1, self._greeting(max(common))
         self.sender.send(self._stored, now_ns)
+        self.runner.new_session(now_ns)
         self.beat(now_ns)
+
+    def _alive(self, now_ns: int) -> bool:
+        """A session is open and its daemon was heard a moment ago."""
+        silence_ns = now_ns - self._heard_ns
+        heard = silence_ns < self.options.watchdog_ms * 1_000_000
+        return self.sender.session is not None and not self._resting and heard
 
     def _greeting(self, version: int) -> Greeting:
         plant, options = self.plant, self.options
@@ -220,8 +239,9 @@ class Responder:
             if shape == (before.n_samples, before.n_channels, before.crc, before.streamed):
                 held.opened = message
                 return TableState(number, name, message.revision, True, ())
+        options = self.options
         self.tables[name] = StoredTable(
-            message, self.options.sample_type, self.options.table_capacity
+            message, options.sample_type, options.table_capacity, self.row_limits(name)
         )
         if message.streamed:
             self.sender.send(self.tables[name].credit(), now_ns)
@@ -262,6 +282,8 @@ class Responder:
                 table.gap_told = True
                 self.sender.send(table.credit(), now_ns)
                 self.sender.send(table.credit(), now_ns)
+        elif table.trouble:
+            self.runner.beyond_limit(table.trouble, now_ns)
         elif table.opened.streamed and table.ready and self.runner.state != RigState.RUNNING:
             self.sender.send(table.credit(), now_ns)
 
@@ -271,45 +293,55 @@ class Responder:
         if table is None or table.opened.revision != message.revision or table.opened.streamed:
             return Refused(number, Refusal.MALFORMED, "no table of that revision is open")
         table.close()
-        if table.verified and message.table == Table.FEEDFORWARD:
-            trouble = table.beyond(*self.input_limits())
-            if trouble:
-                table.verified = False
-                return Refused(number, Refusal.BEYOND_LIMIT, f"feedforward: {trouble}")
+        if table.trouble:
+            name = Table(message.table).name.lower()
+            return Refused(number, Refusal.BEYOND_LIMIT, f"{name}: {table.trouble}")
         return TableState(number, message.table, message.revision, table.verified, table.missing())
 
-    def input_limits(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-        """Low, high and largest step of each input."""
-        inputs = self.plant.inputs
-        period_s = self.plant.period_ticks / TICK_HZ
-        return (
-            np.array([one.low for one in inputs]),
-            np.array([one.high for one in inputs]),
-            np.array([one.rate_per_s * period_s for one in inputs]),
+    def row_limits(self, table: Table) -> RowLimits:
+        """What the rig demands of a table, whatever the daemon thinks."""
+        plant = self.plant
+        channels = plant.inputs if table is Table.FEEDFORWARD else plant.outputs
+        period_s = plant.period_ticks / TICK_HZ
+        return RowLimits(
+            np.array([one.low for one in channels]),
+            np.array([one.high for one in channels]),
+            np.array([one.rate_per_s * period_s for one in channels]),
         )
+
+    def drop_used_tables(self) -> None:
+        """Streamed tables that were played: nobody may play the rest of them by mistake."""
+        self.tables = {name: table for name, table in self.tables.items() if not table.used}
 
     def _on_bye(self, message: Message, number: int, now_ns: int) -> Message:
         self.runner.rest(now_ns)
+        self._resting = True
         return Done(number)
 
     # -- time and out -----------------------------------------------------------------------
 
-    def advance(self, now_ns: int) -> None:
-        """Let time pass: move, sample, beat, watch."""
+    def advance(self, now_ns: int, room: bool = True) -> None:
+        """Let time pass: move, sample, beat, watch.
+
+        `room`: the line takes more. Without it a rig that jumps through time waits, so that it is
+        as fast as its line and not faster; one that keeps the host's time cannot wait.
+        """
         silence_ns = now_ns - self._heard_ns
         if self.runner.watched and silence_ns > self.options.watchdog_ms * 1_000_000:
             text = f"nothing heard for {silence_ns / SECOND_NS:.3g} s"
             self.runner.go_safe(FaultCode.WATCHDOG, FinishReason.HALTED, text, now_ns)
-        self.runner.advance(now_ns)
-        if self.sender.session and now_ns >= self._beat_ns:
+        self.runner.advance(now_ns, room)
+        if now_ns >= self._beat_ns:
             self.beat(now_ns)
 
     def beat(self, now_ns: int) -> None:
-        """A heartbeat; with it the credit of a table that is being streamed."""
+        """A heartbeat; with it the credit of tables that are being streamed."""
         self._beat_ns = now_ns + self.options.watchdog_ms * 1_000_000 // 5
+        if self._resting or self.sender.session is None:
+            return
         self.sender.send(self.runner.heartbeat(now_ns), now_ns)
         for table in self.tables.values():
-            if table.opened.streamed and not self.runner.over:
+            if table.hungry:
                 self.sender.send(table.credit(), now_ns)
 
     def fault(self, code: FaultCode, text: str, now_ns: int) -> None:
@@ -319,9 +351,10 @@ class Responder:
         """Frames to write now, each with its peer."""
         return self.sender.take(now_ns)
 
-    def next_wake_ns(self, now_ns: int) -> int:
+    def next_wake_ns(self, now_ns: int, room: bool = True) -> int:
+        """When `advance` shall be called next, if no frame comes and the line does not change."""
         wakes = [self._beat_ns]
-        for wake in (self.sender.next_wake_ns(), self.runner.next_wake_ns(now_ns)):
+        for wake in (self.sender.next_wake_ns(), self.runner.next_wake_ns(now_ns, room)):
             if wake is not None:
                 wakes.append(wake)
         return min(wakes)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from itertools import islice
 from typing import TYPE_CHECKING
 
 from drivers.messages import (
@@ -19,6 +21,7 @@ from drivers.messages import (
     Refused,
     Resend,
     RigState,
+    Samples,
     Start,
     Started,
     StartMode,
@@ -34,6 +37,12 @@ if TYPE_CHECKING:
 
 UNDERRUN_PATIENCE_NS = 500_000_000
 """A rig whose time jumps waits so long for a streamed block before it counts as an underrun."""
+
+MAX_AHEAD_S = 3600
+"""A start further ahead than this is a mistake."""
+
+AGAIN_BLOCKS = 16
+"""Blocks asked for once more that are handed out in one go."""
 
 
 class Crash(Exception):
@@ -60,9 +69,8 @@ class Runner:
         self._emitted_ns = 0
         self._starved_ns: int | None = None
         self._released_ns = 0
-        self._resting = True
-        self.over = True
-        """No trial needs streamed tables any more."""
+        self._again: Iterator[Samples] | None = None
+        """Blocks that were asked for once more and wait for room on the line."""
 
     @property
     def watched(self) -> bool:
@@ -73,13 +81,13 @@ class Runner:
 
     def new_session(self, now_ns: int) -> None:
         """Whoever greets anew knows nothing of an old trial: stop it and come back."""
-        if self.watched:
+        under_way = self.watched
+        self.rest(now_ns)
+        if under_way:
             self._trial = None
-            self._return(now_ns)
-        self._resting = False
 
     def rest(self, now_ns: int) -> None:
-        self._resting = True
+        self._again = None
         if self.watched:
             self._return(now_ns)
 
@@ -89,8 +97,13 @@ class Runner:
             return Refused(number, Refusal.SAFE_STATE, "the rig is in its safe state")
         if self.state is not RigState.READY:
             return Refused(number, Refusal.NOT_READY, "the rig is not at its start")
-        if message.start == StartMode.RIG and not self._rig.options.rig_starts:
-            return Refused(number, Refusal.UNSUPPORTED, "this rig does not start trials itself")
+        known = (StartMode.DAEMON, *([StartMode.RIG] if self._rig.options.rig_starts else []))
+        if message.start not in known:
+            text = f"start {message.start} is not among those of the greeting"
+            return Refused(number, Refusal.UNSUPPORTED, text)
+        for table in self._rig.tables.values():
+            if table.trouble:
+                return Refused(number, Refusal.BEYOND_LIMIT, table.trouble)
         trouble = self._table_trouble(message)
         if trouble:
             return Refused(number, Refusal.TABLE_UNVERIFIED, trouble)
@@ -101,8 +114,7 @@ class Runner:
 
     def _begin(self, message: Arm, now_ns: int) -> None:
         rig = self._rig
-        for table in rig.tables.values():
-            table.rewind()
+        self._again = None
         self._trial = Trial(
             rig.plant,
             message.trial,
@@ -114,7 +126,6 @@ class Runner:
         rig.sender.arm(self._trial.faults, self._script.source(message.trial))
         self._start_mode = StartMode(message.start)
         self._start_tick = self._starved_ns = None
-        self.over = False
         self._enter(RigState.ARMED, now_ns)
         if self._start_mode is StartMode.RIG and "missed_start" not in self._trial.faults:
             wait = round(rig.options.rig_start_s * TICK_HZ)
@@ -139,8 +150,12 @@ class Runner:
         trial = self._trial
         if trial is None or self.state is not RigState.ARMED or trial.number != message.trial:
             return Refused(number, Refusal.WRONG_TRIAL, "that trial is not armed")
-        if message.tick <= self._rig.clock.tick(now_ns):
+        ahead = message.tick - self._rig.clock.tick(now_ns)
+        if ahead <= 0:
             return Refused(number, Refusal.TOO_LATE, f"tick {message.tick} is over")
+        if ahead > MAX_AHEAD_S * TICK_HZ:
+            text = f"tick {message.tick} is over {MAX_AHEAD_S} s ahead"
+            return Refused(number, Refusal.MALFORMED, text)
         late = round(trial.faults.get("late_start", 0.0) * TICK_HZ)
         if "missed_start" not in trial.faults:
             self._start_tick = message.tick + late
@@ -151,7 +166,7 @@ class Runner:
         if self.state is RigState.RUNNING:
             return Refused(number, Refusal.NOT_READY, "the trial runs already")
         if self.state is RigState.ARMED:
-            self._trial, self.over = None, True
+            self._trial = None
             self._enter(RigState.READY, now_ns)
         return Done(number)
 
@@ -161,10 +176,18 @@ class Runner:
         kept = self._rig.options.samples_kept or not message.spans
         if trial is None or trial.number != message.trial or self.watched or not kept:
             return Refused(number, Refusal.NOT_KEPT, "samples of that trial are not kept")
-        blocks = trial.again(message.spans, self._block_bytes)
-        self._rig.sender.send_blocks(blocks, now_ns, spoil=False)
-        self._rig.sender.send(self._finished(trial), now_ns)
+        self._again = trial.again(message.spans, self._block_bytes)
         return Done(number)
+
+    def _send_again(self, now_ns: int) -> None:
+        """Some of the blocks that were asked for; after the last one Finished."""
+        assert self._again is not None
+        assert self._trial is not None
+        blocks = list(islice(self._again, AGAIN_BLOCKS))
+        self._rig.sender.send_blocks(blocks, now_ns, spoil=False)
+        if len(blocks) < AGAIN_BLOCKS:
+            self._again = None
+            self._rig.sender.send(self._finished(self._trial), now_ns)
 
     def on_clear(self, message: Message, number: int, now_ns: int) -> Message:
         assert isinstance(message, Clear)
@@ -184,12 +207,19 @@ class Runner:
         self._enter(RigState.SAFE, now_ns)
         if running and self._trial is not None:
             self._finish(reason, now_ns)
-        self.over = True
+        self._rig.drop_used_tables()
         self._rig.fault(code, text, now_ns)
+
+    def beyond_limit(self, text: str, now_ns: int) -> None:
+        """A streamed table breaks the limits after it was armed: nothing of it may be played."""
+        if self.watched:
+            self.go_safe(FaultCode.BEYOND_LIMIT, FinishReason.FAULT, text, now_ns)
 
     # -- time -------------------------------------------------------------------------------
 
-    def advance(self, now_ns: int) -> None:
+    def advance(self, now_ns: int, room: bool) -> None:
+        if self._again is not None and room:
+            self._send_again(now_ns)
         tick = self._rig.clock.tick(now_ns)
         if self.state is RigState.RETURNING:
             if self._rig.clock.fast:
@@ -203,7 +233,7 @@ class Runner:
                 tick = self._rig.clock.tick(now_ns)
             if tick >= self._start_tick:
                 self._start(now_ns)
-        if self.state is RigState.RUNNING:
+        if self.state is RigState.RUNNING and (room or not self._rig.clock.fast):
             self._run(now_ns)
 
     def _start(self, now_ns: int) -> None:
@@ -284,12 +314,12 @@ class Runner:
         return False
 
     def _end(self, trial: Trial, now_ns: int) -> None:
-        table = self._rig.tables[Table.FEEDFORWARD]
-        wrong = trial.count == trial.n_samples and table.played_crc(trial.count) != table.opened.crc
-        if wrong:
-            text = "the feedforward that was played has another checksum"
-            self.go_safe(FaultCode.INTERNAL, FinishReason.FAULT, text, now_ns)
-            return
+        for name, table in self._rig.tables.items():
+            whole = trial.count == trial.n_samples
+            if whole and table.played_crc(trial.count) != table.opened.crc:
+                text = f"the {name.name.lower()} that was played has another checksum"
+                self.go_safe(FaultCode.INTERNAL, FinishReason.FAULT, text, now_ns)
+                return
         self._finish(trial.reason, now_ns)
         self._return(now_ns)
 
@@ -297,32 +327,31 @@ class Runner:
         trial = self._trial
         assert trial is not None
         trial.reason = reason
+        trial.feedforward_crc = self._rig.tables[Table.FEEDFORWARD].played_crc(trial.count)
         blocks = trial.blocks(self._block_bytes, everything=True)
         self._rig.sender.send_blocks(blocks, now_ns, spoil=True)
         self._rig.sender.send(self._finished(trial), now_ns)
 
     def _finished(self, trial: Trial) -> Finished:
-        crc = self._rig.tables[Table.FEEDFORWARD].played_crc(trial.count)
         return Finished(
             trial.number,
             trial.reason,
             trial.count,
             trial.start_tick,
             trial.crc(),
-            crc,
+            trial.feedforward_crc,
             trial.start_state,
         )
 
     def _return(self, now_ns: int) -> None:
         """Bring itself back to its start; what it measures on the way concerns nobody."""
-        self.over = True
+        self._rig.drop_used_tables()
         self._back_tick = self._rig.clock.tick(now_ns) + round(self._rig.plant.return_s * TICK_HZ)
         self._enter(RigState.RETURNING, now_ns)
 
     def _enter(self, state: RigState, now_ns: int) -> None:
         self.state = state
-        if self._rig.sender.session:
-            self._rig.beat(now_ns)
+        self._rig.beat(now_ns)
 
     def heartbeat(self, now_ns: int) -> Heartbeat:
         trial = self._trial
@@ -346,15 +375,22 @@ class Runner:
         values: list[float] = own[index].tolist()
         return values
 
-    def next_wake_ns(self, now_ns: int) -> int | None:
+    def next_wake_ns(self, now_ns: int, room: bool) -> int | None:
         clock = self._rig.clock
+        if self._again is not None and room:
+            return now_ns
         if self.state is RigState.RETURNING:
             return now_ns if clock.fast else clock.wall_ns(self._back_tick)
         if self.state is RigState.ARMED and self._start_tick is not None:
             return now_ns if clock.fast else clock.wall_ns(self._start_tick)
         if self.state is RigState.RUNNING and self._trial is not None:
-            if clock.fast:
-                return now_ns if self._starved_ns is None else now_ns + 1_000_000
-            due = self._trial.start_tick + self._trial.count * self._rig.plant.period_ticks
-            return clock.wall_ns(due)
+            return self._next_sample_ns(self._trial, now_ns, room)
         return None
+
+    def _next_sample_ns(self, trial: Trial, now_ns: int, room: bool) -> int | None:
+        clock = self._rig.clock
+        if clock.fast and not room:
+            return None
+        if clock.fast:
+            return now_ns if self._starved_ns is None else now_ns + 1_000_000
+        return clock.wall_ns(trial.start_tick + trial.count * self._rig.plant.period_ticks)

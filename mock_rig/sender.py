@@ -8,14 +8,15 @@ from drivers.codec import pack_frame
 from drivers.messages import ANSWERS, Message, Samples, encode
 
 SECOND_NS = 1_000_000_000
-LINE_FAULTS = ("drop", "duplicate", "reorder", "corrupt", "late")
+BLOCK_FAULTS = ("drop", "duplicate", "reorder", "corrupt", "late")
+ANSWER_FAULTS = ("lost_answer", "double_answer", "corrupt_answer", "late_answer")
 
 
 class Sender:
     """Packs messages and spoils what the faults of the trial say."""
 
     def __init__(self) -> None:
-        self.session = 0
+        self.session: int | None = None
         self.peer = 0
         self.silent_until_ns = 0
         self._ready: deque[tuple[bytes, int]] = deque()
@@ -25,47 +26,60 @@ class Sender:
 
     def arm(self, faults: dict[str, float], chance: Random) -> None:
         """The line's faults for the trial that begins."""
-        self._left = {kind: faults[kind] for kind in LINE_FAULTS if kind in faults}
-        for kind, name in (("lost_answer", "lose"), ("double_answer", "double")):
-            if kind in faults:
-                self._left[name] = faults[kind]
+        kinds = (*BLOCK_FAULTS, *ANSWER_FAULTS)
+        self._left = {kind: faults[kind] for kind in kinds if kind in faults}
         self._chance = chance
 
     def send(
         self, message: Message, now_ns: int, session: int | None = None, peer: int | None = None
     ) -> None:
-        if now_ns < self.silent_until_ns:
+        session = self.session if session is None else session
+        if now_ns < self.silent_until_ns or session is None:
             return
-        frame = pack_frame(self.session if session is None else session, 0, encode(message))
+        frame = pack_frame(session, 0, encode(message))
         to = self.peer if peer is None else peer
+        frames = [frame]
         if isinstance(message, ANSWERS):
-            if self._use("lose"):
-                return
-            if self._use("double"):
-                self._ready.append((frame, to))
-        self._ready.append((frame, to))
+            frames = self._spoil_answer(frame, to, now_ns)
+        self._ready.extend((one, to) for one in frames)
+
+    def _spoil_answer(self, frame: bytes, to: int, now_ns: int) -> list[bytes]:
+        if "late_answer" in self._left:
+            self._hold(frame, to, now_ns, self._left.pop("late_answer"))
+            return []
+        if self._use("lost_answer"):
+            return []
+        if self._use("double_answer"):
+            return [frame, frame]
+        return [self._hit(frame)] if self._use("corrupt_answer") else [frame]
+
+    def _hold(self, frame: bytes, to: int, now_ns: int, seconds: float) -> None:
+        self._held.append((now_ns + int(seconds * SECOND_NS), frame, to))
+
+    def _hit(self, frame: bytes) -> bytes:
+        """The frame with one wrong byte."""
+        at = self._chance.randrange(len(frame))
+        return frame[:at] + bytes([frame[at] ^ 0x5A]) + frame[at + 1 :]
 
     def send_blocks(self, blocks: Sequence[Samples], now_ns: int, spoil: bool) -> None:
         """Sample blocks; `spoil` is false for blocks that were asked for again."""
+        if now_ns < self.silent_until_ns or self.session is None:
+            return
         for block in blocks:
-            if now_ns < self.silent_until_ns:
-                return
             frame = pack_frame(self.session, 0, encode(block))
             for spoiled in self._spoil(frame, now_ns) if spoil else [frame]:
                 self._ready.append((spoiled, self.peer))
 
     def _spoil(self, frame: bytes, now_ns: int) -> list[bytes]:
         if "late" in self._left:
-            due_ns = now_ns + int(self._left.pop("late") * SECOND_NS)
-            self._held.append((due_ns, frame, self.peer))
+            self._hold(frame, self.peer, now_ns, self._left.pop("late"))
             return []
         if self._use("drop"):
             return []
         if self._use("duplicate"):
             return [frame, frame]
         if self._use("corrupt"):
-            at = self._chance.randrange(len(frame))
-            return [frame[:at] + bytes([frame[at] ^ 0x5A]) + frame[at + 1 :]]
+            return [self._hit(frame)]
         if self._ready and self._use("reorder"):
             before, to = self._ready.pop()
             self._ready.append((frame, to))

@@ -1,26 +1,58 @@
 """Tables that the daemon sends: stored whole and verified, or streamed under credit; pure."""
 
+from dataclasses import dataclass
+
 import numpy as np
+from crc32c import crc32c
 from numpy.typing import NDArray
 
-from drivers.messages import Credit, Table, TableBlock, TableOpen
+from drivers.messages import Credit, TableBlock, TableOpen
 from drivers.tables import missing_spans, table_crc
 
 LIMIT_SLACK = 1e-6
 """Relative slack of the rig's own limit check: rounding of the wire's sample type."""
 
 
+@dataclass(frozen=True)
+class RowLimits:
+    """What one table's samples must keep to; arrays of one number a channel."""
+
+    low: NDArray[np.float64]
+    high: NDArray[np.float64]
+    step: NDArray[np.float64]
+    """Largest change from one sample to the next."""
+
+    def broken(self, rows: NDArray[np.floating], before: NDArray[np.floating] | None = None) -> str:
+        """What breaks them, in words, empty if nothing does; `before` is the sample before."""
+        values = rows.astype(np.float64)
+        if not np.isfinite(values).all():
+            return "a sample is not a number"
+        slack = LIMIT_SLACK * np.maximum(np.abs(self.low), np.abs(self.high))
+        if ((values < self.low - slack) | (values > self.high + slack)).any():
+            return "a sample lies outside the declared range"
+        if before is not None:
+            values = np.vstack([before, values])
+        if (np.abs(np.diff(values, axis=0)) > self.step * (1 + LIMIT_SLACK) + slack).any():
+            return "samples change faster than the declared rate"
+        return ""
+
+
 class StoredTable:
     """One named table. A streamed one holds `capacity` samples and forgets what was played."""
 
-    def __init__(self, opened: TableOpen, sample_type: str, capacity: int) -> None:
+    def __init__(
+        self, opened: TableOpen, sample_type: str, capacity: int, limits: RowLimits
+    ) -> None:
         self.opened = opened
         self.verified = False
+        self.trouble = ""
+        """What breaks the limits, in words."""
+        self._limits = limits
         self._dtype = np.dtype(f"<{sample_type}")
         self._capacity = capacity
         size = min(opened.n_samples, capacity) if opened.streamed else opened.n_samples
         self._rows = np.zeros((size, opened.n_channels), self._dtype)
-        self._here = np.zeros(size, dtype=bool)
+        self._here = np.zeros(0 if opened.streamed else size, dtype=bool)
         self._have = 0
         self._played = 0
         self._credited = 0
@@ -39,14 +71,19 @@ class StoredTable:
         rows = np.frombuffer(block.data, self._dtype).reshape(count, -1)
         if self.opened.streamed:
             return self._take_next(block.first, rows)
-        self._rows[block.first : block.first + count] = rows
-        self._here[block.first : block.first + count] = True
+        if not self.verified:
+            # Where a sample is already here, the first arrival holds.
+            fresh = ~self._here[block.first : block.first + count]
+            self._rows[block.first : block.first + count][fresh] = rows[fresh]
+            self._here[block.first : block.first + count] = True
         return True
 
     def _take_next(self, first: int, rows: NDArray[np.floating]) -> bool:
         """In order only, and only into free room."""
         if first != self._have or first + len(rows) > self._played + self._capacity:
             return False
+        before = self._rows[(first - 1) % len(self._rows)] if first else None
+        self.trouble = self.trouble or self._limits.broken(rows, before)
         places = np.arange(first, first + len(rows)) % len(self._rows)
         self._rows[places] = rows
         self._have += len(rows)
@@ -54,11 +91,14 @@ class StoredTable:
         return True
 
     def close(self) -> None:
-        """Check whether it is whole and of the announced checksum."""
-        whole = bool(self._here.all())
-        self.verified = whole and table_crc(self._rows.tobytes()) == self.opened.crc
-        if whole and not self.verified:
+        """Check whether it is whole, of the announced checksum, and within the limits."""
+        if self.verified or not self._here.all():
+            return
+        if table_crc(self._rows.tobytes()) != self.opened.crc:
             self._here[:] = False
+            return
+        self.trouble = self._limits.broken(self._rows)
+        self.verified = not self.trouble
 
     def missing(self) -> tuple[tuple[int, int], ...]:
         return () if self.verified or not self._here.any() else missing_spans(self._here)
@@ -79,16 +119,21 @@ class StoredTable:
 
     @property
     def ready(self) -> bool:
-        """Enough is here to arm."""
+        """Enough is here to arm, and nothing of it was played before."""
         if not self.opened.streamed:
             return self.verified
-        return self._have >= min(self._capacity, self.opened.n_samples)
+        enough = self._have >= min(self._capacity, self.opened.n_samples)
+        return enough and not self.used
 
-    def rewind(self) -> None:
-        """Before a trial that plays a stored table from its beginning."""
-        if not self.opened.streamed:
-            self._played = 0
-            self._crc = 0
+    @property
+    def used(self) -> bool:
+        """A streamed table of which something was played: it cannot be played again."""
+        return self.opened.streamed and self._played > 0
+
+    @property
+    def hungry(self) -> bool:
+        """A streamed table that is not yet in to its end."""
+        return self.opened.streamed and self._have < self.opened.n_samples
 
     def row(self, index: int) -> list[float] | None:
         """The sample to play now, None if it is not here: an underrun."""
@@ -97,7 +142,7 @@ class StoredTable:
         row = self._rows[index % len(self._rows)]
         if self.opened.streamed and index == self._played:
             # Once a sample: it is looked up again if the other table ran dry at it.
-            self._crc = _extend_crc(self._crc, row.tobytes())
+            self._crc = crc32c(row.tobytes(), self._crc)
             self._played = index + 1
         values: list[float] = row.tolist()
         return values
@@ -114,27 +159,3 @@ class StoredTable:
         if count >= self.opened.n_samples:
             return self.opened.crc
         return table_crc(self._rows[:count].tobytes())
-
-    def beyond(
-        self, low: NDArray[np.float64], high: NDArray[np.float64], step: NDArray[np.float64]
-    ) -> str:
-        """What breaks the rig's own limits, in words; empty if nothing does."""
-        rows = self._rows.astype(np.float64)
-        slack = LIMIT_SLACK * np.maximum(np.abs(low), np.abs(high))
-        if ((rows < low - slack) | (rows > high + slack)).any():
-            return "a sample lies outside the declared range"
-        change = np.abs(np.diff(rows, axis=0))
-        with np.errstate(invalid="ignore"):
-            if (change > step * (1 + LIMIT_SLACK) + slack).any():
-                return "samples change faster than the declared rate"
-        return "" if np.isfinite(rows).all() else "a sample is not a number"
-
-
-def _extend_crc(crc: int, data: bytes) -> int:
-    from crc32c import crc32c
-
-    extended: int = crc32c(data, crc)
-    return extended
-
-
-Tables = dict[Table, StoredTable]

@@ -1,8 +1,9 @@
 """One trial of the mock rig: plant and faults, sample by sample; pure."""
 
 import math
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from random import Random
 
 import numpy as np
 
@@ -35,6 +36,7 @@ class Sensor:
     span: float
     trials: int
     hit: int
+    chance: Random
     held: float = math.nan
 
     def read(self, index: int, value: float) -> float:
@@ -43,6 +45,9 @@ class Sensor:
             value += faults["drift"] * self.span * self.trials
         if "spike" in faults and index == self.hit:
             value += faults["spike"] * self.span
+        burst = faults.get("noise_burst", 0.0)
+        if burst and self.hit <= index < self.hit + max(1, self.n_samples // 10):
+            value += burst * self.span * self.chance.gauss(0.0, 1.0)
         if "nan" in faults and self.hit <= index < self.hit + faults["nan"]:
             value = math.nan
         if "stuck" in faults and index >= faults["stuck"] * self.n_samples:
@@ -69,6 +74,8 @@ class Trial:
         self.count = 0
         self.start_tick = 0
         self.reason = FinishReason.COMPLETE
+        self.feedforward_crc = 0
+        """Of what was played, known at the end."""
         self._plant = plant
         n_outputs = len(plant.outputs)
         effect = disturbance(self.faults, n_outputs)
@@ -78,16 +85,16 @@ class Trial:
         self._sent = 0
         span = plant.outputs[0].high - plant.outputs[0].low
         trials = script.since(number, "drift")
-        hit = script.source(number).randrange(
-            n_samples // 4, max(n_samples // 4 + 1, 3 * n_samples // 4)
-        )
-        self._sensor = Sensor(self.faults, n_samples, span, trials, hit)
+        chance = script.source(number)
+        hit = chance.randrange(n_samples // 4, max(n_samples // 4 + 1, 3 * n_samples // 4))
+        self._sensor = Sensor(self.faults, n_samples, span, trials, hit, chance)
         share = self.faults.get("cut_short", 1.0)
         self.length = n_samples if share >= 1 else max(1, int(share * n_samples))
 
     @property
     def row_bytes(self) -> int:
-        return self._rows.shape[1] * self._dtype.itemsize
+        n_bytes: int = self._rows.shape[1] * self._dtype.itemsize
+        return n_bytes
 
     @property
     def over(self) -> bool:
@@ -112,14 +119,13 @@ class Trial:
             self._sent = end
         return found
 
-    def again(self, spans: Sequence[tuple[int, int]], block_bytes: int) -> list[Samples]:
-        """Blocks for spans that were asked for."""
+    def again(self, spans: Sequence[tuple[int, int]], block_bytes: int) -> Iterator[Samples]:
+        """Blocks for spans that were asked for, one by one."""
         step = max(1, block_bytes // self.row_bytes)
-        found = []
         for first, count in spans:
             end = min(first + count, self.count)
-            found += [self._block(k, min(k + step, end)) for k in range(first, end, step)]
-        return found
+            for k in range(first, end, step):
+                yield self._block(k, min(k + step, end))
 
     def crc(self) -> int:
         return table_crc(self._rows[: self.count].tobytes())

@@ -49,6 +49,7 @@ BY_ERROR: dict[str, ExitCode] = {
     "Busy": ExitCode.BUSY,
     "RunRefused": ExitCode.DISAGREEMENT,
     "RecordError": ExitCode.RECORD,
+    "ReplayError": ExitCode.RECORD,
     "OSError": ExitCode.SYSTEM,
 }
 """By class name, so that naming an error imports nothing; the nearest base class counts."""

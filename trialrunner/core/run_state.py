@@ -6,7 +6,7 @@ every trial, so that a resumed run and a replay continue bit for bit.
 
 import math
 from collections.abc import Callable, Mapping
-from dataclasses import asdict, dataclass, field, fields, replace
+from dataclasses import dataclass, field, fields, replace
 from typing import Any
 
 import numpy as np
@@ -81,8 +81,7 @@ class RunState:
 
     def to_json(self) -> dict[str, Any]:
         """JSON-ready; NaN and infinities as strings, because JSON has none."""
-        values = asdict(self)
-        return {key: _plain(value) for key, value in values.items()}
+        return {f.name: _plain(getattr(self, f.name)) for f in fields(self)}
 
     @classmethod
     def from_json(cls, values: Mapping[str, Any]) -> "RunState":
@@ -100,11 +99,13 @@ _TEXT = "text:"
 
 
 def _plain(value: Any) -> Any:
+    if isinstance(value, int):
+        return value
+    if isinstance(value, float):
+        return value if math.isfinite(value) else f"float:{value}"
     if isinstance(value, str) and (value in _ODD or value.startswith(_TEXT)):
         return _TEXT + value
-    if isinstance(value, float) and not math.isfinite(value):
-        return f"float:{value}"
-    if isinstance(value, dict):
+    if isinstance(value, Mapping):
         return {key: _plain(item) for key, item in value.items()}
     if isinstance(value, list | tuple):
         return [_plain(item) for item in value]
@@ -112,6 +113,8 @@ def _plain(value: Any) -> Any:
 
 
 def _read(value: Any) -> Any:
+    if isinstance(value, int | float):
+        return value
     if isinstance(value, str):
         return _ODD.get(value, value.removeprefix(_TEXT))
     if isinstance(value, dict):

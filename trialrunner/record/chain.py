@@ -19,6 +19,8 @@ HASHED = {
 }
 """Columns in the chain: all but the arrays' bytes, for which their SHA-256 stands."""
 
+_ENCODER = json.JSONEncoder(default=bytes.hex)
+
 
 def canonical(row: Iterable[Any]) -> Row:
     """Values as SQLite hands them back: no booleans, no negative zero, no NaN."""
@@ -41,5 +43,5 @@ def link(before: bytes, head: Row, rows: Iterable[tuple[str, Row]]) -> bytes:
     """
     total = hashlib.sha256(before)
     for name, row in (("entries", head), *rows):
-        total.update(json.dumps([name, *row], default=bytes.hex).encode() + b"\n")
+        total.update(_ENCODER.encode([name, *row]).encode() + b"\n")
     return total.digest()

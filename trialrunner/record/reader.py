@@ -57,8 +57,12 @@ class TrialSummary:
     """NaN where the trial is incomplete."""
     action: str
     sentence: str
-    state: RunState
-    """After the trial."""
+    state_json: str
+
+    @property
+    def state(self) -> RunState:
+        """The run state after the trial; parsed when asked for, because few ask."""
+        return RunState.from_json(json.loads(self.state_json))
 
 
 @dataclass(frozen=True)
@@ -289,7 +293,7 @@ def _summary(row: tuple[Any, ...]) -> TrialSummary:
         values[name] = bool(values[name])
     for name in ("start_lateness_s", "collect_s", "compute_s", "commit_s", "norm"):
         values[name] = _number(values[name])
-    return TrialSummary(**values, state=RunState.from_json(json.loads(row[-1])))
+    return TrialSummary(**values, state_json=row[-1])
 
 
 def _request(row: tuple[Any, ...]) -> RequestRow:

@@ -226,7 +226,8 @@ class Replay:
         if side is None or self.counterfactual_from is not None:
             return
         if side.action != then.action:
-            self._diverge(index + 1, f"trial {index} would have led to {side.action}")
+            because = f"after trial {index}, {side.action} instead of {then.action}"
+            self._diverge(index + 1, because)
 
     def _compare_states(self, said: str, following: int) -> None:
         """Note where state and arrays differ; another feedforward parts the ways."""

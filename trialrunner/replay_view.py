@@ -13,6 +13,9 @@ from trialrunner.core.trial import Level, Verdict
 from trialrunner.record import RecordReader
 from trialrunner.replay import Replay, ReplayedTrial, Side
 
+MAX_ROWS = 200
+"""Lines of the table; a record of weeks that differs everywhere is told by its first lines."""
+
 
 @dataclass(frozen=True)
 class View:
@@ -74,25 +77,32 @@ class TextView(View):
 
         console = Console(highlight=False)
         table = Table("trial", "error norm", "recorded", "replayed", box=None, padding=(0, 2))
-        parted, shown = False, 0
+        shown = wanted = 0
         for row in replay.trials():
             if not self.wants(row):
                 continue
-            if row.counterfactual and not parted:
-                parted = True
-                table.add_section()
+            wanted += 1
+            if wanted > MAX_ROWS and not self.show_all:
+                continue
             style = "dim" if row.counterfactual else "yellow" if _differs(row) else ""
             table.add_row(*(Text(cell) for cell in _cells(row)), style=style)
             shown += 1
         if shown:
             console.print(table)
-        hidden = replay.n_trials - shown
-        if hidden and not self.show_all and self.asked:
-            console.print(f"{hidden} more trials that both judge alike (--all shows them).")
+        if wanted > shown:
+            console.print(f"{wanted - shown} more such trials (--all shows them).")
+        if self.asked and replay.n_trials > wanted:
+            alike = replay.n_trials - wanted
+            console.print(f"{alike} more trials that both judge alike (--all shows them).")
         for text, style in self._sentences(replay):
             console.print(Text(text, style=style))
-        said = "checked, and the chain of entries ends with" if verified else "the chain ends with"
-        console.print(Text(f"{reader.path}: {said} {reader.chain_head()}", style="dim"))
+        said = "Checked; the" if verified else "The"
+        console.print(
+            f"{said} chain of {reader.path} ends with {reader.chain_head()}",
+            style="dim",
+            soft_wrap=True,
+            markup=False,
+        )
 
     def _sentences(self, replay: Replay) -> list[tuple[str, str]]:
         if not self.asked:
@@ -110,8 +120,8 @@ class TextView(View):
             text = f"The record tells of every trial it has, and ends there: {replay.because}."
             return [(text, "yellow")]
         text = (
-            f"From trial {start} on the record can no longer tell: {replay.because}. The dim rows "
-            "judge each later trial by itself, as if all before it had been as recorded."
+            f"From trial {start} on the record can no longer tell: {replay.because}. What stands "
+            "in brackets judges a later trial by itself, as if all before it had been as recorded."
         )
         return [(text, "yellow")]
 
@@ -130,6 +140,7 @@ def _cells(row: ReplayedTrial) -> tuple[str, ...]:
     replayed = row.differences[0] if row.replayed is None else _words(row.replayed)
     if row.replayed is not None and _words(row.recorded) == replayed:
         replayed = "same" if row.same else row.differences[0]
+    replayed = f"({replayed})" if row.counterfactual else replayed
     return str(row.index), f"{row.recorded.norm:.4g}", _words(row.recorded), replayed
 
 

@@ -9,6 +9,7 @@ import pytest
 from click.testing import CliRunner
 
 from drivers.messages import RigState
+from trialrunner.__main__ import run_command
 from trialrunner.cli.replay import command
 from trialrunner.config import ConfigError
 from trialrunner.exit_codes import ExitCode
@@ -347,11 +348,88 @@ def test_the_command_exits_non_zero_and_names_the_first_difference(world):
 
 
 def test_the_command_prints_json_for_scripts(world):
-    run = world(trials=3).run()
-    code, output = run_cli(
-        run.config.record_path, "--json", "--all", "--set", "law.proportional=0.2"
-    )
-    result = json.loads(output)
+    """Rows and the finding in one object, without NaN."""
+    run = world(trials=3, faults=["nan@trial=1"]).run()
+
+    def refuse(word):
+        raise AssertionError(f"{word} is no JSON")
+
+    arguments = (run.config.record_path, "--json", "--all", "--set", "law.proportional=0.2")
+    code, output = run_cli(*arguments)
+    result = json.loads(output, parse_constant=refuse)
     assert code == ExitCode.OK
     assert result["counterfactual_from"] == 1
-    assert result["rows"][0]["trial"] == 0
+    assert result["trials"] == len(result["rows"]) == 7
+    assert not result["reproduced"]
+    first, second = result["rows"][:2]
+    assert (first["trial"], first["counterfactual"]) == (0, False)
+    assert second["recorded"]["void"]
+    assert second["recorded"]["norm"] is None
+    assert second["replayed"]["verdicts"][0]["guard"] == "integrity"
+    assert len(result["chain"]) == 64
+
+
+def test_json_without_a_row_is_json(world):
+    """A record that is reproduced has nothing to show."""
+    run = world(trials=2).run()
+    code, output = run_cli(run.config.record_path, "--json", "--verify")
+    result = json.loads(output)
+    assert code == ExitCode.OK
+    assert result["rows"] == []
+    assert result["reproduced"]
+    assert result["verified"]
+    assert result["first_difference"] is None
+
+
+def test_what_the_record_cannot_tell_stands_in_brackets(world):
+    """Also where colours do not show; the sentence says from where on and why."""
+    run = world(
+        trials=10, faults=["gain@from=6,size=5"], overrides=["guards.error_growth.enabled=false"]
+    ).run()
+    asked = ("--set", "guards.error_growth.enabled=true", "--all")
+    code, output = run_cli(run.config.record_path, *asked)
+    assert code == ExitCode.OK
+    lines = output.splitlines()
+    start = next(line for line in lines if "the record can no longer tell" in line).split()[2]
+    told = [line for line in lines if line.split()[:1] == [str(int(start) - 1)]]
+    beyond = [line for line in lines if line.split()[:1] == [start]]
+    assert "(" not in told[0].split("by error_growth")[0]
+    assert "(" in beyond[0]
+
+
+def test_a_long_list_of_differences_is_cut_short(world, monkeypatch):
+    """With the number of those left out."""
+    run = world(trials=6).run()
+    monkeypatch.setattr("trialrunner.replay_view.MAX_ROWS", 2)
+    with sqlite3.connect(run.config.record_path) as db:
+        db.execute("UPDATE trials SET sentence = 'x'")
+    db.close()
+    code, output = run_cli(run.config.record_path)
+    assert code == ExitCode.DIFFERENT
+    assert "7 more such trials" in output
+    assert "9 of 9 trials differ" in output
+
+
+def test_damage_is_told_by_place_and_by_exit_code(world, capsys):
+    """Before anything is replayed."""
+    run = world(trials=2).run()
+    with sqlite3.connect(run.config.record_path) as db:
+        db.execute("UPDATE arrays SET data = zeroblob(length(data)) WHERE name = 'output'")
+    db.close()
+    code, output = run_cli(run.config.record_path, "--verify")
+    assert code == ExitCode.RECORD
+    assert "trial 0, output: the stored bytes do not agree" in output
+    assert run_command(["replay", str(run.config.record_path)]) == ExitCode.RECORD
+    assert "restore the record from a copy" in capsys.readouterr().err
+    assert run_command(["replay", "no-such-record"]) == ExitCode.RECORD
+
+
+def test_a_record_that_a_daemon_still_writes_is_replayed_as_far_as_it_goes(world):
+    """Nothing waits, nothing is locked."""
+    run = world(trials=6)
+    run.until_trial(3)
+    rows, replay = replayed(run.config.record_path)
+    assert len(rows) == 3
+    assert not replay.first_difference
+    run.run()
+    assert run.session.state.counted == 6

@@ -181,8 +181,11 @@ class Session:
 
     def tell_link(self) -> None:
         """Refresh what the status says of the link."""
-        talk = self.line.conversation
-        self.observer.link(self.line.up, 0 if talk is None else talk.errors.total())
+        talk, link = self.line.conversation, self.line.link
+        errors = 0 if talk is None else talk.bad_frames
+        if link is not None:
+            errors += sum(link.statistics().errors.values())
+        self.observer.link(self.line.up, errors)
 
     # -- what the rig says ------------------------------------------------------------------
 

@@ -395,3 +395,23 @@ def test_memory_of_the_session_does_not_grow_with_trials(world):
     run = world(trials=40, n_samples=60).run()
     assert len(run.session.state.recent_norms) <= 64
     assert len(run.session.line.talk.events) < 10
+
+
+def test_a_rig_may_own_the_reference_and_is_held_to_its_checksum(world):
+    import zlib
+
+    from drivers.tables import table_crc
+
+    shape = np.sin(np.linspace(0, np.pi, 100))[:, None].astype("f4").astype(float)
+    checksum = table_crc(shape.astype("<f4").tobytes())
+    folder = world(record="unused.trialrecord").config.record_path.parent
+    np.savez(folder / "shape.npz", position=shape[:, 0])
+    owned = f"reference={{kind='rig', checksum={checksum}, path='{folder / 'shape.npz'}'}}"
+    options = RigOptions(reference=shape, chunk=20)
+    run = world(trials=4, options=options, overrides=[owned]).run()
+    np.testing.assert_array_equal(run.session.built.intake.reference, shape)
+    assert run.session.state.best_norm < run.session.state.first_norm / 3
+    assert run.rig.tables.keys() == {0}
+    other = owned.replace(str(checksum), str(zlib.crc32(b"another")))
+    with pytest.raises(RunRefused, match=r"reference\.checksum"):
+        world(record="other.trialrecord", options=options, overrides=[other]).run()

@@ -39,6 +39,7 @@ def command(
         click.echo(f"warning: {warning}", err=True)
     click.echo(SAFETY, err=True)
     launch.keep_freed_memory()
+    launch.answer_quickly()
     with launch.launched(settings, new_run=new_run, exit_on_halt=exit_on_halt) as running:
         launch.catch_signals(running.waker)
         running.daemon.run()

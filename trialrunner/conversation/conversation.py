@@ -51,6 +51,9 @@ from trialrunner.conversation.trial_talk import TrialTalk
 from trialrunner.core.clock_sync import ClockSync
 
 SECOND_NS = 1_000_000_000
+HARMLESS = frozenset({"session", "before greeting", "stale answer", "stale pong", "stale samples"})
+"""Kinds of frames that any restart or repeated message brings with it."""
+
 MAX_REASON = 100
 """Letters of a reason that go to the rig; all of it goes into the record."""
 
@@ -95,6 +98,11 @@ class Conversation:
         self._urgent.clear()
         self._commander.restart()
         self._trial.forget()
+
+    @property
+    def bad_frames(self) -> int:
+        """Frames that were wrong, not merely late or of an earlier session."""
+        return sum(n for kind, n in self.errors.items() if kind not in HARMLESS)
 
     # -- orders -----------------------------------------------------------------------------
 

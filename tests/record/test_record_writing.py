@@ -15,7 +15,14 @@ from hypothesis import strategies as st
 from trialrunner.core.errors import CoreError
 from trialrunner.core.run_state import RunState
 from trialrunner.core.trial import Level, Verdict
-from trialrunner.record import RecordMisuse, RecordReader, RecordUnwritable, arrays, sqlite_warning
+from trialrunner.record import (
+    RecordBusy,
+    RecordMisuse,
+    RecordReader,
+    RecordUnwritable,
+    arrays,
+    sqlite_warning,
+)
 from trialrunner.record import writer as writer_module
 
 ODD = [0.0, -0.0, math.nan, math.inf, -math.inf, 5e-324, 1 / 3]
@@ -312,3 +319,44 @@ def test_an_old_sqlite_is_spoken_of(monkeypatch):
     assert "only writer" in sqlite_warning()
     monkeypatch.setattr(writer_module.sqlite3, "sqlite_version_info", (3, 51, 3))
     assert sqlite_warning() == ""
+
+
+def begin_anew(parts, path):
+    made = parts.RecordWriter.create(
+        path, parts.facts(), parts.REFERENCE, RunState(), parts.carry(0), set_old_aside=True
+    )
+    made.close()
+
+
+def test_a_new_run_keeps_the_old_record_beside_it(parts, writer, path):
+    """Whole, also what a killed daemon left in the log, and as often as it is asked for."""
+    parts.fill(writer, 3)
+    writer._lock.release()
+    begin_anew(parts, path)
+    begin_anew(parts, path)
+    names = ["run.20260101000000.trialrecord", "run.20260101000000-2.trialrecord"]
+    trials = []
+    for name in names:
+        with RecordReader(path.with_name(name)) as reader:
+            trials.append(reader.n_trials)
+            assert reader.verify() == []
+    assert trials == [3, 0]
+    with RecordReader(path) as reader:
+        assert reader.n_trials == 0
+
+
+def test_a_record_in_use_is_not_set_aside(parts, writer, path):
+    """Its daemon would go on writing into a file of another name."""
+    parts.fill(writer, 1)
+    with pytest.raises(RecordBusy, match="held by another trialrunner"):
+        begin_anew(parts, path)
+    parts.fill(writer, 1)
+    assert [one.name for one in path.parent.glob("*.trialrecord")] == ["run.trialrecord"]
+
+
+def test_a_file_of_another_program_is_set_aside_as_it_is(parts, path):
+    """Nothing of it is lost."""
+    path.write_text("somebody's notes")
+    begin_anew(parts, path)
+    kept = path.with_name("run.20260101000000.trialrecord")
+    assert kept.read_text() == "somebody's notes"

@@ -18,6 +18,7 @@ from trialrunner.core.trial import Array, Trial
 from trialrunner.locks import Busy, Lock, hold_lock
 from trialrunner.record import arrays, queries
 from trialrunner.record.arrays import Blob
+from trialrunner.record.aside import set_aside
 from trialrunner.record.entry import Entry
 from trialrunner.record.errors import (
     RecordBusy,
@@ -79,13 +80,17 @@ class RecordWriter:
         state: RunState,
         carry: Carry,
         now_ns: Callable[[], int] = time.monotonic_ns,
+        set_old_aside: bool = False,
     ) -> "RecordWriter":
         """A new record. Raises RecordError; a file of that name is never overwritten.
 
-        `now_ns` is the daemon's monotonic clock, by which commits are timed.
+        `now_ns` is the daemon's monotonic clock, by which commits are timed. With `set_old_aside`
+        a file of that name is renamed first, unless somebody writes it.
         """
         with _held(path) as lock:
-            if path.exists():
+            if path.exists() and set_old_aside:
+                set_aside(path, facts.started_utc)
+            elif path.exists():
                 raise RecordUnwritable(f"{path}: exists already; choose another name")
             _make(path, facts, reference, state, carry)
             daemon = DaemonRow.start(facts.config_text, facts.version, facts.started_utc)

@@ -1,10 +1,10 @@
 """One belt-driven axis: motor, belt, load, friction, cogging, its own feedback loop; pure."""
 
 import math
-from collections import deque
 from dataclasses import dataclass
 from random import Random
 
+from mock_rig.feedforward_path import FeedforwardPath
 from mock_rig.friction import LuGre
 from mock_rig.plant import Disturbance
 
@@ -41,7 +41,7 @@ class AxisParameters:
 NOISE_S = 0.05
 """Correlation time of the process noise."""
 
-RESONANCE_HZ, RESONANCE_DAMPING = 17.0, 0.02
+RESONANCE_HZ = 17.0
 """Of the resonance that a fault adds to the response to the feedforward."""
 
 
@@ -53,10 +53,12 @@ class Axis:
         self._period_s = period_s
         self._step_s = period_s / substeps
         self.substeps = substeps
-        self.begin(0.0, Disturbance(), Random(0))
+        self.begin(0.0, 0.0, Disturbance(), Random(0))
 
-    def begin(self, start: float, disturbance: Disturbance, chance: Random) -> None:
-        """Stand at a start, up to its spread; loops and filters start afresh."""
+    def begin(
+        self, start: float, reference: float, disturbance: Disturbance, chance: Random
+    ) -> None:
+        """Stand at a start, up to its spread; the loop has been holding against `reference`."""
         p = self.parameters
         self._chance = chance
         spread = p.start_spread_m * disturbance.noise
@@ -64,29 +66,32 @@ class Axis:
         self.motor_v = self.load_v = 0.0
         self._bristles = 0.0
         self._friction = p.friction.scaled(disturbance.friction)
-        self._gain = disturbance.gain
         self._limit = p.force_limit_n * disturbance.load_limit
         self._noise_n = p.process_noise_n * disturbance.noise
         self._noise = chance.gauss(0.0, self._noise_n)
-        self._waiting = deque([0.0] * disturbance.extra_delay)
-        self._resonance = disturbance.resonance
-        self._ring = self._ring_v = 0.0
-        self._filtered = self._last_error = 0.0
+        self._path = FeedforwardPath(disturbance, self._period_s, RESONANCE_HZ)
+        self._filtered = 0.0
+        self._last_error = self._error(reference)
         self._force = 0.0
         self.limited = False
 
     def measured(self) -> float:
         """Position of the load as its encoder tells it."""
+        return self._encoded(self.load)
+
+    def _encoded(self, position: float) -> float:
         step = self.parameters.encoder_m
-        return round(self.load / step) * step
+        return round(position / step) * step
+
+    def _error(self, reference: float) -> float:
+        """What the loop sees: it closes over the motor's encoder, not the load's."""
+        return reference - self._encoded(self.motor)
 
     def command(self, feedforward: float, reference: float) -> None:
         """Once a sample: the controller's force for the next period (one sample of delay)."""
         p = self.parameters
-        self._waiting.append(feedforward)
-        effect = self._gain * self._waiting.popleft()
-        effect += self._ringing(effect)
-        error = reference - round(self.motor / p.encoder_m) * p.encoder_m
+        effect = self._path.apply(feedforward)
+        error = self._error(reference)
         share = self._period_s / (p.derivative_s + self._period_s)
         rate = (error - self._last_error) / self._period_s
         self._filtered += share * (rate - self._filtered)
@@ -97,16 +102,6 @@ class Axis:
         keep = math.exp(-self._period_s / NOISE_S)
         fresh = self._noise_n * math.sqrt(1 - keep * keep)
         self._noise = keep * self._noise + self._chance.gauss(0.0, fresh)
-
-    def _ringing(self, effect: float) -> float:
-        """A lightly damped oscillator driven by the feedforward, while that fault is on."""
-        if not self._resonance:
-            return 0.0
-        omega = 2 * math.pi * RESONANCE_HZ
-        push = omega * omega * (effect - self._ring) - 2 * RESONANCE_DAMPING * omega * self._ring_v
-        self._ring_v += push * self._period_s
-        self._ring += self._ring_v * self._period_s
-        return self._resonance * self._ring
 
     def move(self, outside_n: float) -> float:
         """One substep under a force on the load from outside; the belt's force on the load."""

@@ -89,7 +89,7 @@ class BeadPlant:
         offsets = (*disturbance.offset, *([0.0] * len(self._axes)))
         self._temperature = min(COLD_CEL + WARMING_CEL_PER_TRIAL * trial, WARM_CEL)
         for axis, start, offset in zip(self._axes, reference0, offsets, strict=False):
-            axis.begin(start + offset, disturbance, chance)
+            axis.begin(start + offset, start, disturbance, chance)
         return [axis.measured() for axis in self._axes]
 
     def step(

@@ -1,16 +1,20 @@
 """A small thermal-cycling chamber: first order plus delay under a PI loop; slow; pure."""
 
+import math
 from collections import deque
 from collections.abc import Sequence
 from random import Random
 
+from mock_rig.feedforward_path import FeedforwardPath
 from mock_rig.plant import TICK_HZ, ChannelInfo, Disturbance
 
 PERIOD_TICKS = 5 * TICK_HZ
 GAIN_K_PER_W = 0.25
 TIME_CONSTANT_S = 400.0
 DELAY_SAMPLES = 6
-SUBSTEPS = 5
+"""From the power to the air: what is commanded at sample k shows first at sample k + 7."""
+RESONANCE_HZ = 0.004
+"""Of the resonance that a fault adds to the response to the feedforward."""
 PROPORTIONAL_W_PER_K = 12.0
 INTEGRAL_W_PER_KS = 0.02
 POWER_LIMIT_W = 400.0
@@ -42,14 +46,18 @@ class Chamber:
     ) -> list[float]:
         self._chance = Random(f"{self._seed}/{self.name}/{trial}")
         self._effect = disturbance
+        # Loss of heat sets both: what a watt holds, and how soon it is held.
+        self._gain = GAIN_K_PER_W / disturbance.friction
+        settling_s = TIME_CONSTANT_S / disturbance.friction
+        self._share = 1.0 - math.exp(-PERIOD_TICKS / TICK_HZ / settling_s)
         spread = AMBIENT_SPREAD_K * disturbance.noise
         self._ambient = AMBIENT_CEL + self._chance.gauss(0.0, spread)
         start = reference0[0] + sum(disturbance.offset[:1])
         self._temperature = start + self._chance.gauss(0.0, 0.02 * disturbance.noise)
-        holding = (start - AMBIENT_CEL) / GAIN_K_PER_W
+        holding = (start - AMBIENT_CEL) / self._gain
         self._integral = holding
         self._pipe = deque([holding] * DELAY_SAMPLES)
-        self._waiting = deque([0.0] * disturbance.extra_delay)
+        self._path = FeedforwardPath(disturbance, PERIOD_TICKS / TICK_HZ, RESONANCE_HZ)
         self._power_noise = 0.0
         return [self._measured()]
 
@@ -67,8 +75,7 @@ class Chamber:
 
     def _command(self, feedforward: float, error: float) -> bool:
         """The PI loop's power goes into the pipe; true while it is limited."""
-        self._waiting.append(feedforward)
-        effect = self._effect.gain * self._waiting.popleft()
+        effect = self._path.apply(feedforward)
         wanted = effect + PROPORTIONAL_W_PER_K * error + self._integral
         limit = POWER_LIMIT_W * self._effect.load_limit
         power = min(max(wanted, -limit), limit)
@@ -80,8 +87,6 @@ class Chamber:
         return power != wanted
 
     def _move(self, power: float) -> None:
-        step_s = PERIOD_TICKS / TICK_HZ / SUBSTEPS
-        loss = TIME_CONSTANT_S * self._effect.friction
-        for _ in range(SUBSTEPS):
-            settled = self._ambient + GAIN_K_PER_W * power
-            self._temperature += step_s / loss * (settled - self._temperature)
+        """One period at a held power: the exact answer of a first order."""
+        settled = self._ambient + self._gain * power
+        self._temperature += self._share * (settled - self._temperature)

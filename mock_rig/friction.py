@@ -48,7 +48,10 @@ class LuGre:
         speed = abs(velocity)
         if speed < 1e-12:
             return z, self.s0 * z
-        settled = math.copysign(self.level(velocity) / self.s0, velocity)
-        after = settled + (z - settled) * math.exp(-speed * step_s / abs(settled))
+        length = self.level(velocity) / self.s0
+        if length == 0.0:  # no dry friction
+            return 0.0, self.s2 * velocity
+        settled = math.copysign(length, velocity)
+        after = settled + (z - settled) * math.exp(-speed * step_s / length)
         rate = (after - z) / step_s
         return after, self.s0 * 0.5 * (z + after) + self.s1 * rate + self.s2 * velocity

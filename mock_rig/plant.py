@@ -27,11 +27,13 @@ class Disturbance:
     extra_delay: int = 0
     """Samples by which the feedforward acts later."""
     friction: float = 1.0
+    """Factor on the dry friction of an axis; on the loss of heat of the chamber, above 0."""
     resonance: float = 0.0
     """Size of an added lightly damped resonance in the response to the feedforward."""
     load_limit: float = 1.0
     """Factor on the actuator's saturation."""
     noise: float = 1.0
+    """Factor on everything that differs from trial to trial."""
     offset: tuple[float, ...] = ()
     """Added to the start of each output."""
 

@@ -32,7 +32,8 @@ from trialrunner.observer import Observer
 from trialrunner.operator_messages import OperatorAnswer, parse_answer
 from trialrunner.operator_socket import OperatorSocket
 from trialrunner.record import DaemonRow, RecordReader, RecordWriter, RunFacts
-from trialrunner.session import Built, RunRefused, Session, SessionSettings
+from trialrunner.run_parts import Built, RunRefused, SessionSettings
+from trialrunner.session import Session
 from trialrunner.telemetry import Publisher
 from trialrunner.trial_intake import Intake
 

@@ -7,15 +7,12 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Mapping
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 from trialrunner.clock import Clock
 from trialrunner.core.cycle import Event, State
 from trialrunner.core.run_state import Outcome, RunState
 from trialrunner.core.trial import Array, Level, Trial
-
-if TYPE_CHECKING:
-    from trialrunner.session import Built
 
 TRACE_POINTS = 400
 """Points of a trace in telemetry: what a screen can show; the record holds every sample."""
@@ -76,11 +73,12 @@ class Observer:
 
     # -- told by the session ----------------------------------------------------------------
 
-    def built(self, built: Built) -> None:
-        self._n_samples = len(built.intake.reference)
-        self.status["rig"]["name"] = built.intake.greeted.greeting.name
-        self._take_state(built.state)
-        self.event("rig", f"{built.intake.greeted.greeting.name} greets and agrees")
+    def built(self, rig_name: str, n_samples: int, state: RunState) -> None:
+        """The rig greeted and is the configured one; where the run stands."""
+        self._n_samples = n_samples
+        self.status["rig"]["name"] = rig_name
+        self._take_state(state)
+        self.event("rig", f"{rig_name} greets and agrees")
 
     def transition(self, before: State, event: Event, after: State, cause: str) -> None:
         self.status["state"] = after.value

@@ -8,61 +8,30 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from concurrent.futures import Executor
-from dataclasses import dataclass, replace
+from dataclasses import replace
 from typing import Any, ClassVar
 
 from drivers.link import Link
-from drivers.messages import FaultCode, Refusal, RigState, StartMode
+from drivers.messages import FaultCode, Refusal, RigState
 from trialrunner import operator_desk as desk
 from trialrunner.clock import Clock
-from trialrunner.conversation import Conversation, LinkTiming
+from trialrunner.conversation import Conversation
 from trialrunner.conversation import events as rig
-from trialrunner.core.advance import Advancer
 from trialrunner.core.cycle import Action, Cycle, Event, State, step
 from trialrunner.core.errors import CoreError
 from trialrunner.core.run_state import Carry, Outcome, RunState
-from trialrunner.flight import Flight, StartSettings
+from trialrunner.flight import Flight
 from trialrunner.job_queue import JobQueue
 from trialrunner.observer import Observer
 from trialrunner.operator_messages import OperatorAnswer, OperatorRequest
-from trialrunner.record import RecordError, RecordWriter, RequestRow
+from trialrunner.record import RecordError, RequestRow
 from trialrunner.rig_line import RigLine
+from trialrunner.run_parts import Built, RunRefused, SessionSettings, same_rig
 from trialrunner.timers import SECOND_NS, Timers
-from trialrunner.trial_intake import Intake
 from trialrunner.update_job import PendingRequest, UpdateJob, apply_requests
 
 STOP_CATEGORY = 1
 """Controlled stop, then power removed: what the daemon asks for (words of IEC 60204-1)."""
-
-
-class RunRefused(Exception):
-    """The run cannot start or go on with this rig; the text says why and what to do."""
-
-
-@dataclass(frozen=True)
-class Built:
-    """What exists once the rig has greeted and agrees with the configuration."""
-
-    advancer: Advancer
-    writer: RecordWriter
-    intake: Intake
-    state: RunState
-    carry: Carry
-
-
-@dataclass(frozen=True)
-class SessionSettings:
-    name: str
-    timing: LinkTiming
-    start: StartMode
-    dwell_s: float
-    update_deadline_s: float
-    stop_grace_s: float
-    exit_on_halt: bool
-
-    def for_starts(self) -> StartSettings:
-        timing = self.timing
-        return StartSettings(self.start, self.dwell_s, timing.start_lead_s, timing.silence_s)
 
 
 class Session:
@@ -197,13 +166,14 @@ class Session:
 
     def _on_greeted(self, greeted: rig.Greeted) -> None:
         self.line.greeted()
-        if self.built is not None and not _same_rig(self.built.intake.greeted, greeted):
+        if self.built is not None and not same_rig(self.built.intake.greeted, greeted):
             self._halt("another rig, or the same with other channels, answers on the link")
             return
         if self.built is None:
             self.built = self._build(greeted)
             self.state, self._carry = self.built.state, self.built.carry
-            self.observer.built(self.built)
+            name, n_samples = greeted.greeting.name, len(self.built.intake.reference)
+            self.observer.built(name, n_samples, self.state)
         if self.state.over:
             self._event(Event.END, f"the record says that the run is over: {self.state.over}")
             return
@@ -503,13 +473,3 @@ class Session:
             self.exit_reason = str(error)
             self._halt(f"the trial could not be judged or stored: {error}")
             self._exit_soon()
-
-
-def _same_rig(old: rig.Greeted, new: rig.Greeted) -> bool:
-    """The same rig, whatever the numbers of the messages that described it."""
-
-    def described(greeted: rig.Greeted) -> object:
-        channels = (*greeted.inputs, *greeted.outputs, *greeted.auxiliary)
-        return (replace(greeted.greeting, number=0), [replace(c, number=0) for c in channels])
-
-    return described(old) == described(new)

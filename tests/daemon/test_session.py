@@ -8,7 +8,7 @@ from drivers.messages import FaultCode, RigState
 from mock_rig.options import RigOptions
 from trialrunner.core.cycle import State
 from trialrunner.record import RecordReader, RecordUnwritable
-from trialrunner.session import RunRefused
+from trialrunner.run_parts import RunRefused
 
 
 def played(path):

@@ -5,7 +5,7 @@ from collections.abc import Sequence
 from random import Random
 
 from drivers.codec import pack_frame
-from drivers.messages import ANSWERS, Message, Samples, encode
+from drivers.messages import ANSWERS, Finished, Message, Samples, encode
 
 SECOND_NS = 1_000_000_000
 BLOCK_FAULTS = ("drop", "duplicate", "reorder", "corrupt", "late")
@@ -22,10 +22,13 @@ class Sender:
         self._ready: deque[tuple[bytes, int]] = deque()
         self._held: list[tuple[int, bytes, int]] = []
         self._left: dict[str, float] = {}
+        self._overtaken: bytes | None = None
+        """A sample block that the next one, or Finished, goes ahead of."""
         self._chance = Random(0)
 
     def arm(self, faults: dict[str, float], chance: Random) -> None:
         """The line's faults for the trial that begins."""
+        self._overtaken = None
         kinds = (*BLOCK_FAULTS, *ANSWER_FAULTS)
         self._left = {kind: faults[kind] for kind in kinds if kind in faults}
         self._chance = chance
@@ -41,6 +44,9 @@ class Sender:
         frames = [frame]
         if isinstance(message, ANSWERS):
             frames = self._spoil_answer(frame, to, now_ns)
+        if isinstance(message, Finished) and self._overtaken is not None:
+            frames = [frame, self._overtaken]
+            self._overtaken = None
         self._ready.extend((one, to) for one in frames)
 
     def _spoil_answer(self, frame: bytes, to: int, now_ns: int) -> list[bytes]:
@@ -80,11 +86,11 @@ class Sender:
             return [frame, frame]
         if self._use("corrupt"):
             return [self._hit(frame)]
-        if self._ready and self._use("reorder"):
-            before, to = self._ready.pop()
-            self._ready.append((frame, to))
-            return [before]
-        return [frame]
+        if self._overtaken is None and self._use("reorder"):
+            self._overtaken = frame
+            return []
+        before, self._overtaken = self._overtaken, None
+        return [frame] if before is None else [frame, before]
 
     def _use(self, kind: str) -> bool:
         left = self._left.get(kind, 0)
@@ -107,3 +113,4 @@ class Sender:
     def forget(self) -> None:
         self._ready.clear()
         self._held.clear()
+        self._overtaken = None

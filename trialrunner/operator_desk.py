@@ -8,6 +8,7 @@ from trialrunner.core.cycle import Cycle, Event, State
 from trialrunner.core.run_state import Request, RunState
 from trialrunner.operator_messages import OperatorAnswer, OperatorRequest
 from trialrunner.record import RequestRow
+from trialrunner.run_parts import Built
 
 AT_REST = frozenset({State.IDLE, State.PAUSED, State.HALTED})
 """States between trials, in which a request can change the run state at once."""
@@ -33,17 +34,32 @@ class Situation(Protocol):
     """What the desk needs to know of the session."""
 
     cycle: Cycle
-    state: RunState
+
+    @property
+    def state(self) -> RunState: ...
+
+    @property
+    def built(self) -> Built | None: ...
 
     def link_is_up(self) -> bool: ...
 
 
 def rule(request: OperatorRequest, now: Situation) -> Ruling:
-    """Decide on a request; pure."""
+    """Decide on a request; pure. One that could not be carried out is refused here and now."""
+    ruling = _rule(request, now)
+    if ruling.request is None or not ruling.ok:
+        return ruling
+    if now.built is None:
+        return Ruling(False, "the rig has not greeted yet", now.state.trial)
+    refusal = now.built.advancer.refusal(ruling.request, now.state)
+    return Ruling(False, refusal, now.state.trial) if refusal else ruling
+
+
+def _rule(request: OperatorRequest, now: Situation) -> Ruling:
     boundary = now.state.trial + (now.cycle.state not in AT_REST)
     # A trial that has not started need not be waited for.
     stop = now.state.trial + (now.cycle.state in UNDER_WAY)
-    if now.state.over and request.verb not in ("status", "note"):
+    if now.state.over and request.verb not in ("status", "note", "halt", "end"):
         return Ruling(False, f"the run is over: {now.state.over}", now.state.trial)
     match request.verb:
         case "status" | "note":

@@ -8,7 +8,6 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from concurrent.futures import Executor
-from dataclasses import replace
 from typing import Any, ClassVar
 
 from drivers.link import Link
@@ -19,16 +18,16 @@ from trialrunner.conversation import Conversation
 from trialrunner.conversation import events as rig
 from trialrunner.core.cycle import Action, Cycle, Event, State, step
 from trialrunner.core.errors import CoreError
-from trialrunner.core.run_state import Carry, Outcome, RunState
+from trialrunner.core.run_state import Outcome, RunState
 from trialrunner.flight import Flight
-from trialrunner.job_queue import JobQueue
 from trialrunner.observer import Observer
 from trialrunner.operator_messages import OperatorAnswer, OperatorRequest
-from trialrunner.record import RecordError, RequestRow
+from trialrunner.record import RecordError
 from trialrunner.rig_line import RigLine
+from trialrunner.run_keeper import RunKeeper
 from trialrunner.run_parts import Built, RunRefused, SessionSettings, same_rig
 from trialrunner.timers import SECOND_NS, Timers
-from trialrunner.update_job import PendingRequest, UpdateJob, apply_requests
+from trialrunner.update_job import PendingRequest
 
 STOP_CATEGORY = 1
 """Controlled stop, then power removed: what the daemon asks for (words of IEC 60204-1)."""
@@ -52,25 +51,17 @@ class Session:
         self.clock = clock
         self.observer = observer
         self.cycle = Cycle()
-        self.state = RunState()
-        self.built: Built | None = None
         self.finished = False
         self.exit_reason = ""
         """Empty after a normal end, else why the daemon left."""
         self.halted_by = ""
         """Why the run is halted, or was when the daemon left; empty otherwise."""
         self._build = build
-        self._wake = wake
-        self._carry: Carry | None = None
         self._wish = ""
         """Why somebody asked for the pause or end that waits for the trial boundary."""
-        self._job: UpdateJob | None = None
-        self._before: list[PendingRequest] = []
-        """Accepted requests that hold for the update of the trial under way."""
-        self._after: list[PendingRequest] = []
-        """Accepted requests for the boundary after it."""
+        self.keeper = RunKeeper(executor, clock, wake)
+        self.jobs = self.keeper.jobs
         self.timers = Timers(clock)
-        self.jobs = JobQueue(executor, wake)
 
         def converse(link: Link) -> Conversation:
             return Conversation(
@@ -87,6 +78,16 @@ class Session:
             on_still=self._halt,
         )
         self.timers.start("connect", 0.0, self.line.connect)
+
+    @property
+    def state(self) -> RunState:
+        """Of the run, before the trial under way."""
+        return self.keeper.state
+
+    @property
+    def built(self) -> Built | None:
+        """None until the rig has greeted."""
+        return self.keeper.built
 
     # -- the loop ---------------------------------------------------------------------------
 
@@ -170,10 +171,9 @@ class Session:
             self._halt("another rig, or the same with other channels, answers on the link")
             return
         if self.built is None:
-            self.built = self._build(greeted)
-            self.state, self._carry = self.built.state, self.built.carry
-            name, n_samples = greeted.greeting.name, len(self.built.intake.reference)
-            self.observer.built(name, n_samples, self.state)
+            self.keeper.take_up(self._build(greeted))
+            n_samples = len(self.keeper.run.intake.reference)
+            self.observer.built(greeted.greeting.name, n_samples, self.state)
         if self.state.over:
             self._event(Event.END, f"the record says that the run is over: {self.state.over}")
             return
@@ -213,10 +213,7 @@ class Session:
     def _on_started(self, event: rig.TrialStarted) -> None:
         self._flight.started()
         self._event(Event.STARTED, f"started at rig tick {event.tick}")
-        built = self.built
-        if built is not None and not self.jobs.busy:
-            # The time of the trial is free for what a commit would make slow.
-            self.jobs.submit(built.writer.checkpoint)
+        self.keeper.tidy()
 
     def _on_samples(self, event: rig.SamplesArrived) -> None:
         self.observer.samples(event.first + event.count)
@@ -292,20 +289,18 @@ class Session:
         self._event(Event.HALT, why)
 
     def _do_load(self, cause: str) -> None:
-        if self._job is not None and self._job.late:
-            # The late update's own trial is settled; its commit is waited for before the next one.
+        if self.keeper.late:
+            # Its commit is waited for before the next trial is judged.
             self._load()
         else:
             self.jobs.when_free(self._load)
 
     def _load(self) -> None:
-        if self._after:
-            self._apply_at_rest(self._load)
+        if self.keeper.has_requests:
+            self.keeper.apply_requests(self._load)
         elif self.cycle.state is State.LOADING and self.line.up:
-            assert self.built is not None
-            assert self._carry is not None
             self.observer.loading(self.state)
-            self._flight.load(self.built.intake, self.state.trial, self._carry)
+            self._flight.load(self.keeper.run.intake, self.state.trial, self.keeper.carry)
 
     def _do_order_start(self, cause: str) -> None:
         self._flight.order_start()
@@ -327,42 +322,18 @@ class Session:
                 # No trial was loaded, so there is none to record: go on as after an update.
                 self._event(Event.ADVANCED, "no trial was under way")
             return
-        assert self._carry is not None
-        trial, timing = self._flight.land(self.built.intake, self.state, self._carry)
-        requests, self._before = tuple(self._before), []
-        job = UpdateJob(
-            self.built.advancer,
-            self.built.writer,
-            self.clock,
-            trial,
-            self.state,
-            self._carry,
-            timing,
-            requests,
-        )
-        self._job = job
+        intake = self.built.intake
+        trial, timing = self._flight.land(intake, self.state, self.keeper.carry)
         self.timers.start("deadline", self.settings.update_deadline_s, self._deadline)
-        self.jobs.submit(job.run, self._on_outcome)
-        self.observer.trace(trial, self.built.intake.period_s)
+        self.keeper.update(trial, timing, self._on_outcome)
+        self.observer.trace(trial, intake.period_s)
 
     def _deadline(self) -> None:
-        """The update is not ready: send the last feedforward again, if the trial counts."""
-        job = self._job
-        if job is None or self.cycle.state is not State.UPDATING:
-            return
-        judged = job.judged
-        if judged is None or judged.action != "learn" or not job.claim_late():
-            # Nothing is known of the trial yet, or its update is about to be used: wait for it.
-            return
-        self.state = judged.late_state
-        assert self._carry is not None
-        self._carry = replace(self._carry, feedforward=job.trial.feedforward)
-        self._event(Event.LATE, f"no update within {self.settings.update_deadline_s:g} s")
+        if self.cycle.state is State.UPDATING and self.keeper.go_on_without_update():
+            self._event(Event.LATE, f"no update within {self.settings.update_deadline_s:g} s")
 
     def _on_outcome(self, outcome: Outcome) -> None:
         self.timers.cancel("deadline")
-        self._job = None
-        self.state, self._carry = outcome.state, outcome.carry
         self.observer.outcome(outcome)
         if outcome.late:
             return
@@ -429,47 +400,30 @@ class Session:
     ) -> None:
         """Set going what an operator's request was ruled to mean, and put it on record."""
         row = desk.row(request, ruling, reply)
+        why = f"{request.who}: {request.why}"
         if ruling.request is None or not ruling.ok:
-            self.jobs.when_free(lambda: self._put_on_record(row))
+            self.jobs.when_free(lambda: self.keeper.put_on_record(row))
             if ruling.event is not None:
-                self._event(ruling.event, f"{request.who}: {request.why}")
+                self._event(ruling.event, why)
             return
-        pending = PendingRequest(ruling.request, row)
         at_rest = self.cycle.state in desk.AT_REST
-        if at_rest or ruling.request.kind == "rollback":
-            self._after.append(pending)
-        else:
-            self._before.append(pending)
+        at_boundary = at_rest or ruling.request.kind == "rollback"
+        self.keeper.accept(PendingRequest(ruling.request, row), at_boundary)
         if ruling.event is not None:
-            self._event(ruling.event, f"{request.who}: {request.why}")
-        elif at_rest and self.built is not None:
-            self.jobs.when_free(lambda: self._apply_at_rest(lambda: None))
-
-    def _put_on_record(self, row: RequestRow) -> None:
-        built, state = self.built, self.state
-        if built is not None:
-            self.jobs.submit(lambda: built.writer.commit_request(row, state, None))
-
-    def _apply_at_rest(self, then: Callable[[], None]) -> None:
-        built, carry, state = self.built, self._carry, self.state
-        assert built is not None
-        assert carry is not None
-        requests, self._after = tuple(self._after), []
-
-        def done(changed: tuple[RunState, Carry]) -> None:
-            self.state, self._carry = changed
-            then()
-
-        self.jobs.submit(
-            lambda: apply_requests(built.advancer, built.writer, requests, state, carry), done
-        )
+            self._event(ruling.event, why)
+        elif at_rest:
+            self.jobs.when_free(lambda: self.keeper.apply_requests(_nothing))
 
     def _end_job(self) -> None:
         try:
             self.jobs.poll()
         except (RecordError, CoreError) as error:
-            self._job = None
+            self.keeper.forget_job()
             self.timers.cancel("deadline")
             self.exit_reason = str(error)
             self._halt(f"the trial could not be judged or stored: {error}")
             self._exit_soon()
+
+
+def _nothing() -> None:
+    """Requests applied at rest have no trial to load after them."""

@@ -5,10 +5,11 @@ race for the deadline through one claim, so that a late update is either used wh
 """
 
 import threading
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 from trialrunner.clock import Clock
 from trialrunner.core.advance import Advancer, Judged
+from trialrunner.core.errors import CoreError
 from trialrunner.core.run_state import Carry, Outcome, Request, RunState
 from trialrunner.core.trial import Trial
 from trialrunner.record import RecordWriter, RequestRow, TrialTiming
@@ -72,8 +73,18 @@ def apply_requests(
     state: RunState,
     carry: Carry,
 ) -> tuple[RunState, Carry]:
-    """Apply and commit operator requests, each in its own transaction."""
+    """Apply and commit operator requests, each in its own transaction.
+
+    One that has become impossible since it was accepted changes nothing, and the record says so.
+    """
     for pending in requests:
-        state, carry, _ = advancer.apply_request(pending.request, state, carry, writer.recall)
+        try:
+            state, carry, _ = advancer.apply_request(pending.request, state, carry, writer.recall)
+        except CoreError as error:
+            row = replace(
+                pending.row, ok=False, changes_state=False, why=f"{pending.row.why} ({error})"
+            )
+            writer.commit_request(row, state, None)
+            continue
         writer.commit_request(pending.row, state, carry)
     return state, carry

@@ -415,3 +415,39 @@ def test_a_rig_may_own_the_reference_and_is_held_to_its_checksum(world):
     other = owned.replace(str(checksum), str(zlib.crc32(b"another")))
     with pytest.raises(RunRefused, match=r"reference\.checksum"):
         world(record="other.trialrecord", options=options, overrides=[other]).run()
+
+
+@pytest.mark.parametrize(
+    ("verb", "arguments", "words"),
+    [
+        ("rollback", {"to": "999"}, "999"),
+        ("rollback", {"to": "last_good"}, "nothing has been learned"),
+        ("resume", {}, "nothing to resume"),
+    ],
+)
+def test_a_request_that_cannot_be_is_refused_and_the_run_goes_on(world, verb, arguments, words):
+    run = world(trials=4)
+    run.until_state(State.RUNNING)
+    if words == "999":
+        run.until_trial(2)
+    reply = run.tell(verb, **arguments)
+    assert not reply.ok
+    assert words in reply.text
+    run.run()
+    assert run.session.state.counted == 4
+    with RecordReader(run.config.record_path) as reader:
+        (asked,) = reader.requests()
+    assert (asked.kind, asked.ok) == (verb, False)
+
+
+def test_a_request_that_became_impossible_is_noted_and_changes_nothing(world):
+    run = world(trials=3)
+    run.until_trial(2)
+    run.until_state(State.RUNNING)
+    assert run.tell("rollback", to="0").ok
+    run.run()
+    assert run.session.state.over
+    with RecordReader(run.config.record_path) as reader:
+        (asked,) = reader.requests()
+    assert not asked.ok
+    assert "floor trials" in asked.why

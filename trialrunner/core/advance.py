@@ -149,6 +149,19 @@ class Advancer:
         state, sentence = change(state)
         return state, carry, sentence
 
+    def refusal(self, request: Request, state: RunState) -> str:
+        """Why `apply_request` would not do it in this state; empty if it would."""
+        try:
+            if state.over:
+                raise CoreError(f"{request.kind}: the run is over: {state.over}")
+            if request.kind == "rollback":
+                _operator_target(request.target, state)
+            else:
+                _CHANGES[request.kind](state)
+        except CoreError as error:
+            return str(error)
+        return ""
+
     def _ask_guards(
         self, trial: Trial, state: RunState, carry: Carry, norm: float
     ) -> tuple[tuple[Verdict, ...], dict[str, Memory]]:

@@ -18,6 +18,7 @@ from drivers.link import Link
 from drivers.open import RIG, open_link
 from mock_rig.faults import KINDS, FaultScript, FaultSpecError
 from mock_rig.options import RigOptions
+from mock_rig.plant import Plant
 from mock_rig.plants import PLANTS
 from mock_rig.responder import Responder
 from mock_rig.runner import Crash
@@ -83,13 +84,14 @@ def _reference(path: str, plant: str) -> NDArray[np.float64]:
     """Raises ReferenceUnreadable."""
     n_outputs = len(PLANTS[plant](0).outputs)
     try:
-        found = np.load(Path(path), allow_pickle=False)
+        with Path(path).open("rb") as file:
+            found: NDArray[Any] = np.lib.format.read_array(file, allow_pickle=False)
     except OSError as error:
         raise ReferenceUnreadable(f"{path}: {error.strerror}") from None
     except (ValueError, EOFError):
         raise ReferenceUnreadable(f"{path}: expected an NPY file, found something else") from None
-    if not isinstance(found, np.ndarray) or found.dtype.kind not in "fiu":
-        raise ReferenceUnreadable(f"{path}: expected an NPY file with one array of numbers")
+    if found.dtype.kind not in "fiu":
+        raise ReferenceUnreadable(f"{path}: expected an array of numbers, found {found.dtype}")
     values = found.astype(np.float64)
     if values.ndim != 2 or values.shape[1] != n_outputs or not 0 < len(values) <= MAX_SAMPLES:
         raise ReferenceUnreadable(
@@ -120,19 +122,11 @@ def serve(plant: str, url: str, options: RigOptions, script: FaultScript) -> Non
     """Until a signal comes; a crash closes the link and comes back as a rig that knows nothing."""
     while True:
         link = open_link(url, RIG)
-        # A port that the system chose stays the same when the rig comes back.
-        url = link.url
-        print(json.dumps(_announcement(link, plant)), flush=True)
-        rig = Responder(
-            PLANTS[plant](options.seed),
-            options,
-            script,
-            link.max_body,
-            link.block_bytes,
-            time.monotonic_ns(),
-        )
         try:
-            _loop(link, rig)
+            # A port that the system chose stays the same when the rig comes back.
+            url = link.url
+            print(json.dumps(_announcement(link, plant)), flush=True)
+            _loop(link, _rig(PLANTS[plant](options.seed), link, options, script))
         except Crash as crash:
             link.close()
             time.sleep(crash.away_s)
@@ -143,6 +137,11 @@ def serve(plant: str, url: str, options: RigOptions, script: FaultScript) -> Non
             time.sleep(AGAIN_S)
         finally:
             link.close()
+
+
+def _rig(plant: Plant, link: Link, options: RigOptions, script: FaultScript) -> Responder:
+    now_ns = time.monotonic_ns()
+    return Responder(plant, options, script, link.max_body, link.block_bytes, now_ns)
 
 
 def _announcement(link: Link, plant: str) -> dict[str, str]:

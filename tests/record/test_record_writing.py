@@ -120,6 +120,13 @@ def test_masks_are_packed_eight_to_a_byte(flags):
     assert arrays.same_bits(arrays.unpack("mask", blob.row()), mask)
 
 
+def test_arrays_of_another_type_or_shape_are_never_the_same_bits():
+    """Though their bytes may be."""
+    assert not arrays.same_bits(np.zeros(4, dtype=np.float32), np.zeros(4))
+    assert not arrays.same_bits(np.zeros((4, 1)), np.zeros((2, 2)))
+    assert arrays.same_bits(np.zeros((4, 2))[::2], np.zeros((2, 2)))
+
+
 def test_a_resumed_writer_goes_on_with_the_same_state_and_arrays(parts, writer, path):
     """State and carry, law's and floor's arrays included, bit for bit."""
     after = parts.carry(

@@ -31,7 +31,7 @@ from trialrunner.logs import get_logger
 from trialrunner.observer import Observer
 from trialrunner.operator_messages import OperatorAnswer, parse_answer
 from trialrunner.operator_socket import OperatorSocket
-from trialrunner.record import DaemonRow, RecordReader, RecordWriter, RunFacts
+from trialrunner.record import DaemonRow, RecordReader, RecordWriter, RunFacts, sqlite_warning
 from trialrunner.run_parts import Built, RunRefused, SessionSettings
 from trialrunner.session import Session
 from trialrunner.telemetry import Publisher
@@ -176,6 +176,9 @@ def launched(
         publisher = Publisher(context, config.telemetry_url)
         stack.callback(publisher.close)
         logger = get_logger("trialrunner")
+        known_bug = sqlite_warning()
+        if known_bug:
+            logger.info(known_bug)
         observer = Observer(
             run=config.run.name,
             record=str(config.record_path),

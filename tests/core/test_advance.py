@@ -149,7 +149,8 @@ def test_guards_remember_from_trial_to_trial(bench: Make) -> None:
     rig = bench()
     for _ in range(6):
         rig.play()
-    assert set(rig.state.memories) == {"error_growth", "saturation", "law"}
+    assert {"error_growth", "saturation", "law"} <= set(rig.state.memories)
+    assert "divergence" not in rig.state.memories
     assert len(rig.state.memories["saturation"]["shares"]) == 6
 
 

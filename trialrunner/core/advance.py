@@ -66,6 +66,8 @@ class Advancer:
         self._rules = Rules(settings.ladder, settings.stop)
         self._scales = np.array([channel.scale for channel in settings.outputs])
         self._guards = _guards(settings)
+        asked = (guard for stage in self._guards.values() for guard in stage.values())
+        self._n_charts = sum(getattr(guard, "CHARTS", 0) for guard in asked)
 
     def begin(self, initial_feedforward: Array | None = None) -> tuple[RunState, Carry]:
         """State and arrays before trial 0; starts from zero unless a feedforward is given.
@@ -193,6 +195,8 @@ class Advancer:
             recent_norms=_recent_norms(state),
             learning=state.learning,
             limits_rising=state.updates < self._settings.learn.soft_start_trials,
+            n_charts=self._n_charts,
+            auxiliary=self._settings.auxiliary,
         )
 
     def _learn(self, judged: Judged) -> tuple[RunState, Carry]:

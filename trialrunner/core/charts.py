@@ -10,6 +10,7 @@ import math
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from functools import lru_cache
+from itertools import pairwise
 from statistics import median
 
 import numpy as np
@@ -182,8 +183,27 @@ class Level:
 
 
 def robust_level(values: Sequence[float], least_spread: float) -> Level:
-    """Median and MAD x 1.4826 of at least one value; a smaller spread than `least_spread` is not
-    believed."""
+    """Median and MAD x 1.4826 of at least one value, oldest first.
+
+    The MAD of the values above the median counts where it is larger: growth is judged on that side,
+    and error norms are skewed. Where consecutive values go together, sums of them scatter more by
+    sqrt((1 + r) / (1 - r)) with r their correlation (first-order autoregression). A spread smaller
+    than `least_spread` is not believed.
+    """
     centre = median(values)
-    spread = MAD_TO_SIGMA * median(abs(value - centre) for value in values)
+    both = median(abs(value - centre) for value in values)
+    above = median([value - centre for value in values if value >= centre])
+    spread = MAD_TO_SIGMA * max(both, above)
+    if spread > 0.0:
+        r = _correlation([(value - centre) / spread for value in values])
+        spread *= math.sqrt((1.0 + r) / (1.0 - r))
     return Level(centre, max(spread, least_spread), len(values))
+
+
+def _correlation(scores: Sequence[float]) -> float:
+    """Of each score with the one before it, between 0 and 0.8; beyond two a score counts as two."""
+    kept = [min(max(score, -2.0), 2.0) for score in scores]
+    squares = sum(score * score for score in kept)
+    if squares == 0.0:
+        return 0.0
+    return min(max(sum(a * b for a, b in pairwise(kept)) / squares, 0.0), 0.8)

@@ -176,3 +176,5 @@ class RunSettings:
     """Settings value of each guard by name, from guards.guard_table()."""
     ladder: LadderSettings = field(default_factory=LadderSettings)
     stop: StopSettings = field(default_factory=StopSettings)
+    auxiliary: tuple[str, ...] = ()
+    """Names of the rig's auxiliary channels in its order; empty where they are not known."""

@@ -48,6 +48,10 @@ class GuardContext:
     learning: bool
     limits_rising: bool
     """The soft start still holds the feedforward below its full limits."""
+    n_charts: int = 1
+    """Control charts among the guards of the run; together they share the wished false alarms."""
+    auxiliary: tuple[str, ...] = ()
+    """Names of the trial's auxiliary channels; empty where nobody told."""
 
 
 class GuardSettings(Protocol):
@@ -113,8 +117,10 @@ def require_channels(name: str, used: Iterable[str], outputs: tuple[OutputChanne
 
 def guard_table() -> dict[str, tuple[Stage, type[Any]]]:
     """Stage and settings class of each guard by its name, in the order in which they judge."""
+    from trialrunner.core.guards.cusum import Cusum
     from trialrunner.core.guards.divergence import Divergence
     from trialrunner.core.guards.error_growth import ErrorGrowth
+    from trialrunner.core.guards.ewma import Ewma
     from trialrunner.core.guards.integrity import Integrity
     from trialrunner.core.guards.saturation import Saturation
     from trialrunner.core.guards.start import StartState, StartTiming
@@ -125,5 +131,7 @@ def guard_table() -> dict[str, tuple[Stage, type[Any]]]:
         "start_timing": (Stage.ADMISSION, StartTiming),
         "divergence": (Stage.LEARNING, Divergence),
         "error_growth": (Stage.LEARNING, ErrorGrowth),
+        "cusum": (Stage.LEARNING, Cusum),
+        "ewma": (Stage.LEARNING, Ewma),
         "saturation": (Stage.LEARNING, Saturation),
     }

@@ -1,0 +1,67 @@
+"""What the control charts on the error norm share: the level they compare with and its scatter."""
+
+import math
+from collections.abc import Sequence
+from statistics import median
+
+from trialrunner.core.charts import Level, robust_level
+from trialrunner.core.guards import GuardContext
+from trialrunner.core.scatter import MAD_TO_SIGMA
+from trialrunner.core.trial import Memory, Purpose, Trial
+
+WINDOW_TRIALS = 48
+"""Trials that the level is taken from. A rig's slow drift moves the level with it; growth by more
+than about a tenth of the scatter each trial leaves it behind and shows."""
+
+SETTLED = 1.0
+"""Spreads by which the older half of the window may lie above the newer half: beyond that the
+error is still falling and the oldest trials say nothing about what to expect."""
+
+HIGHEST_SCORE = 4.0
+"""One outlier alone never signals; a jump is for `error_growth` and `divergence`."""
+
+
+def level_before(context: GuardContext, warm_up: int, least_spread: float) -> Level | None:
+    """Level of ln(error norm) before this trial; None while too few trials were seen."""
+    norms = context.recent_norms[-WINDOW_TRIALS:]
+    logs = [math.log(norm) for norm in norms if norm > 0.0]
+    if len(logs) < warm_up:
+        return None
+    while len(logs) > warm_up and _falling(logs, least_spread):
+        logs = logs[1:]
+    return robust_level(logs, least_spread)
+
+
+def _falling(logs: Sequence[float], least_spread: float) -> bool:
+    half = len(logs) // 2
+    older, newer = median(logs[:half]), logs[half:]
+    centre = median(newer)
+    spread = MAD_TO_SIGMA * median(abs(value - centre) for value in newer)
+    return older - centre > SETTLED * max(spread, least_spread)
+
+
+def score_of(context: GuardContext, level: Level) -> float:
+    """Normal score of this trial's error norm, bounded above."""
+    if not context.error_norm > 0.0:
+        return -HIGHEST_SCORE
+    return min(level.score(math.log(context.error_norm)), HIGHEST_SCORE)
+
+
+def judged(trial: Trial) -> bool:
+    """Only what follows from the last update is compared, frozen or not."""
+    return trial.purpose is Purpose.LEARN
+
+
+def number(memory: Memory, key: str, default: float) -> float:
+    value = memory.get(key, default)
+    return default if isinstance(value, str | list) else float(value)
+
+
+def comparison(context: GuardContext, level: Level, first: int, last: int) -> str:
+    """The words for what was compared with what."""
+    trials = f"trials {first} to {last}" if last > first else f"trial {last}"
+    return (
+        f"{trials} lie above the level {math.exp(level.centre):.4g} of {level.n_trials} trials "
+        f"before (scatter {100.0 * math.expm1(level.spread):.3g} %); the error norm is "
+        f"{context.error_norm:.4g} now"
+    )

@@ -284,17 +284,17 @@ def test_a_reader_sees_committed_trials_while_the_daemon_writes(parts, writer, p
 
 
 def test_reading_takes_no_more_memory_for_a_longer_record(parts, writer, path):
-    """Trials stream by, one at a time: 300 of them would be half a megabyte."""
-    parts.fill(writer, 400)
+    """Trials stream by, one at a time: 120 of them would be a quarter of a megabyte."""
+    parts.fill(writer, 200)
     held = {}
     tracemalloc.start()
     with RecordReader(path) as reader:
         for row in reader.trials():
-            if row.summary.index in (70, 390):
+            if row.summary.index in (70, 190):
                 gc.collect()
                 held[row.summary.index] = tracemalloc.get_traced_memory()[0]
     tracemalloc.stop()
-    assert held[390] - held[70] < 100_000
+    assert held[190] - held[70] < 100_000
 
 
 def test_the_connection_is_as_safe_as_it_was_asked_to_be(writer):

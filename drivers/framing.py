@@ -26,28 +26,26 @@ class FrameSplitter:
     def feed(self, data: bytes) -> list[bytes]:
         """Frames completed by these bytes, unstuffed and not verified."""
         *whole, rest = (self._rest + data).split(DELIMITER)
-        frames = [frame for stuffed in whole if (frame := self._unstuff(stuffed)) is not None]
+        if whole and self._skipping:
+            # The end of a run that was already counted as too long.
+            del whole[0]
+            self._skipping = False
         if len(rest) > self._max_stuffed:
             if not self._skipping:
                 self.errors["length"] += 1
             self._skipping, rest = True, b""
         self._rest = rest
-        return frames
+        # Two delimiters in a row are allowed: a sender may flush the line with one.
+        return [frame for stuffed in whole if stuffed and (frame := self._unstuff(stuffed))]
 
-    def _unstuff(self, stuffed: bytes) -> bytes | None:
-        if self._skipping:
-            # The end of a run that was already counted as too long.
-            self._skipping = False
-            return None
-        if not stuffed:
-            # Two delimiters in a row are allowed: a sender may flush the line with one.
-            return None
+    def _unstuff(self, stuffed: bytes) -> bytes:
+        """Empty for what is too long or cannot be."""
         if len(stuffed) > self._max_stuffed:
             self.errors["length"] += 1
-            return None
+            return b""
         try:
             frame: bytes = cobs.decode(stuffed)
         except cobs.DecodeError:
             self.errors["cobs"] += 1
-            return None
+            return b""
         return frame

@@ -49,7 +49,7 @@ class ZmqLink(Link):
         address = _address(url, self._router)
         self._context: zmq.Context[zmq.Socket[bytes]] = zmq.Context()
         self._socket = self._context.socket(zmq.ROUTER if self._router else zmq.DEALER)
-        self._queue: deque[list[bytes]] = deque()
+        self._queue: deque[tuple[bytes | None, bytes]] = deque()
         self._queued_bytes = 0
         self._peers: dict[bytes, int] = {}
         self._unix_path = Path(address[6:]) if self._router and address.startswith("ipc") else None
@@ -107,12 +107,26 @@ class ZmqLink(Link):
 
     def send(self, frame: bytes, peer: int = 0) -> None:
         self._require_open()
-        if self._queued_bytes > limits.MAX_BACKLOG_BYTES:
-            self._on_backlog()
-        self._queue.append([self._identity(peer), frame] if self._router else [frame])
-        self._queued_bytes += len(frame)
+        identity = self._identity(peer) if self._router else None
+        if self._queue or not self._put(identity, frame):
+            if self._queued_bytes > limits.MAX_BACKLOG_BYTES:
+                self._on_backlog()
+            self._queue.append((identity, frame))
+            self._queued_bytes += len(frame)
         self._count_out(len(frame))
-        self.flush()
+
+    def _put(self, identity: bytes | None, frame: bytes) -> bool:
+        """Hand one frame to ZeroMQ; false if it has no room."""
+        try:
+            if identity is not None:
+                self._socket.send(identity, zmq.NOBLOCK | zmq.SNDMORE)
+            self._socket.send(frame, zmq.NOBLOCK)
+        except zmq.Again:
+            return False
+        except zmq.ZMQError:
+            # The peer has gone or was never there; its silence is noticed by whoever waits.
+            self._errors["no peer"] += 1
+        return True
 
     def _on_backlog(self) -> None:
         """A rig goes on with what comes next, as a UART would; a daemon gives the line up."""
@@ -125,14 +139,10 @@ class ZmqLink(Link):
     def flush(self) -> bool:
         self._require_open()
         while self._queue:
-            try:
-                self._socket.send_multipart(self._queue[0], zmq.NOBLOCK)
-            except zmq.Again:
+            if not self._put(*self._queue[0]):
                 return False
-            except zmq.ZMQError:
-                # The peer has gone or was never there; its silence is noticed by whoever waits.
-                self._errors["no peer"] += 1
-            self._queued_bytes -= len(self._queue.popleft()[-1])
+            _, sent = self._queue.popleft()
+            self._queued_bytes -= len(sent)
         return True
 
     def receive(self) -> list[Received]:
@@ -147,10 +157,14 @@ class ZmqLink(Link):
                 raise LinkLost(f"{self.url}: receiving failed: {error}") from None
             if received is not None:
                 taken.append(received)
-        if not taken and not self._router and self._monitor.poll(0):
+        if not taken and self._broken():
             raise LinkLost(f"{self.url}: the connection to the rig broke")
         self._count_in([one.data for one in taken])
         return taken
+
+    def _broken(self) -> bool:
+        """Looked at only when nothing came, so that no frame is lost for it."""
+        return not self._router and bool(int(self._monitor.getsockopt(zmq.EVENTS)) & zmq.POLLIN)
 
     def _receive_one(self) -> Received | None:
         """One message frame by frame: what has too many parts is dropped as it comes."""
@@ -158,12 +172,13 @@ class ZmqLink(Link):
         wanted = 2 if self._router else 1
         more, count = True, 0
         while more:
-            # The parts after the first are there with it, so that this never waits.
-            part = self._socket.recv(zmq.NOBLOCK)
-            more = bool(self._socket.getsockopt(zmq.RCVMORE))
+            # The parts after the first are there with it, so that this never waits. A Frame knows
+            # whether more follows; asking the socket would cost as much as the receiving.
+            part = self._socket.recv(zmq.NOBLOCK, copy=False)
+            more = part.more
             count += 1
             if count <= wanted:
-                parts.append(part)
+                parts.append(part.bytes)
         if count != wanted:
             self._errors["parts"] += 1
             return None

@@ -130,6 +130,12 @@ class Responder:
             answer = self._handlers[type(message)](message, number, now_ns)
             self._last, self._stored = number, answer
             self.sender.send(answer, now_ns)
+            if isinstance(message, TableOpen) and isinstance(answer, TableState):
+                self._send_credit(self.tables[Table(message.table)], now_ns)
+
+    def _send_credit(self, table: StoredTable, now_ns: int) -> None:
+        if table.hungry:
+            self.sender.send(table.credit(), now_ns)
 
     def _on_unnumbered(self, message: Message, now_ns: int) -> None:
         match message:
@@ -243,8 +249,6 @@ class Responder:
         self.tables[name] = StoredTable(
             message, options.sample_type, options.table_capacity, self.row_limits(name)
         )
-        if message.streamed:
-            self.sender.send(self.tables[name].credit(), now_ns)
         return TableState(number, name, message.revision, False, ())
 
     def _table_trouble(self, message: TableOpen) -> tuple[int, str] | None:
@@ -262,8 +266,10 @@ class Responder:
         width = widths[Table(message.table)]
         if message.n_channels != width:
             return Refusal.MALFORMED, f"{message.n_channels} channels; this table has {width}"
-        if not 0 < message.n_samples <= self.options.max_samples:
-            return Refusal.TOO_LARGE, f"takes 1 to {self.options.max_samples} samples"
+        if not message.n_samples:
+            return Refusal.MALFORMED, "a table without samples"
+        if message.n_samples > self.options.max_samples:
+            return Refusal.TOO_LARGE, f"takes at most {self.options.max_samples} samples"
         if message.n_samples > self.options.table_capacity and not message.streamed:
             return (
                 Refusal.TOO_LARGE,
@@ -277,7 +283,7 @@ class Responder:
             self.errors["stale block"] += 1
         elif not table.take(block):
             self.errors["block"] += 1
-            if table.opened.streamed and not table.gap_told:
+            if table.misses(block.first) and not table.gap_told:
                 # Told twice, so that a lost credit does not hide the gap; then not again.
                 table.gap_told = True
                 self.sender.send(table.credit(), now_ns)
@@ -341,8 +347,7 @@ class Responder:
             return
         self.sender.send(self.runner.heartbeat(now_ns), now_ns)
         for table in self.tables.values():
-            if table.hungry:
-                self.sender.send(table.credit(), now_ns)
+            self._send_credit(table, now_ns)
 
     def fault(self, code: FaultCode, text: str, now_ns: int) -> None:
         self.sender.send(Fault(code, text[:200], self.clock.tick(now_ns)), now_ns)

@@ -69,6 +69,8 @@ class Runner:
         self._emitted_ns = 0
         self._starved_ns: int | None = None
         self._released_ns = 0
+        self._kept = False
+        """The last trial is over and may be asked for once more."""
         self._again: Iterator[Samples] | None = None
         """Blocks that were asked for once more and wait for room on the line."""
 
@@ -81,10 +83,8 @@ class Runner:
 
     def new_session(self, now_ns: int) -> None:
         """Whoever greets anew knows nothing of an old trial: stop it and come back."""
-        under_way = self.watched
+        self._kept = False
         self.rest(now_ns)
-        if under_way:
-            self._trial = None
 
     def rest(self, now_ns: int) -> None:
         self._again = None
@@ -114,7 +114,7 @@ class Runner:
 
     def _begin(self, message: Arm, now_ns: int) -> None:
         rig = self._rig
-        self._again = None
+        self._again, self._kept = None, False
         self._trial = Trial(
             rig.plant,
             message.trial,
@@ -166,15 +166,14 @@ class Runner:
         if self.state is RigState.RUNNING:
             return Refused(number, Refusal.NOT_READY, "the trial runs already")
         if self.state is RigState.ARMED:
-            self._trial = None
             self._enter(RigState.READY, now_ns)
         return Done(number)
 
     def on_resend(self, message: Message, number: int, now_ns: int) -> Message:
         assert isinstance(message, Resend)
         trial = self._trial
-        kept = self._rig.options.samples_kept or not message.spans
-        if trial is None or trial.number != message.trial or self.watched or not kept:
+        enough = self._rig.options.samples_kept or not message.spans
+        if trial is None or trial.number != message.trial or not (self._kept and enough):
             return Refused(number, Refusal.NOT_KEPT, "samples of that trial are not kept")
         self._again = trial.again(message.spans, self._block_bytes)
         return Done(number)
@@ -326,7 +325,7 @@ class Runner:
     def _finish(self, reason: FinishReason, now_ns: int) -> None:
         trial = self._trial
         assert trial is not None
-        trial.reason = reason
+        trial.reason, self._kept = reason, True
         trial.feedforward_crc = self._rig.tables[Table.FEEDFORWARD].played_crc(trial.count)
         blocks = trial.blocks(self._block_bytes, everything=True)
         self._rig.sender.send_blocks(blocks, now_ns, spoil=True)

@@ -130,6 +130,10 @@ class StoredTable:
         """A streamed table of which something was played: it cannot be played again."""
         return self.opened.streamed and self._played > 0
 
+    def misses(self, first: int) -> bool:
+        """A block from there on tells of a gap in a streamed table."""
+        return self.opened.streamed and self._have < first < self.opened.n_samples
+
     @property
     def hungry(self) -> bool:
         """A streamed table that is not yet in to its end."""

@@ -142,7 +142,7 @@ def test_a_table_exactly_at_the_limits_passes_in_float32(bench):
     [
         (TableOpen(5, 1, 10, 1, 0, False), Refusal.UNSUPPORTED),
         (TableOpen(FEED, 1, 10, 2, 0, False), Refusal.MALFORMED),
-        (TableOpen(FEED, 1, 0, 1, 0, False), Refusal.TOO_LARGE),
+        (TableOpen(FEED, 1, 0, 1, 0, False), Refusal.MALFORMED),
         (TableOpen(FEED, 1, 401, 1, 0, True), Refusal.TOO_LARGE),
         (TableOpen(FEED, 1, 101, 1, 0, False), Refusal.TOO_LARGE),
         (TableClose(FEED, 1), Refusal.MALFORMED),
@@ -270,6 +270,25 @@ def test_a_lost_block_is_told_by_the_next_credit_and_nothing_after_it_is_taken(s
     rig.heard.clear()
     rig.send(blocks[2])
     assert {(one.have, one.upto) for one in rig.of(Credit)} == {(50, 150)}
+
+
+def test_a_repeated_block_is_dropped_and_no_credit_is_sent_for_it(stream):
+    rig, values = stream()
+    rows = rig.rows(values)
+    rig.open(FEED, rows, streamed=True)
+    blocks = rig.blocks(FEED, rows[:150], size=50)
+    rig.send(blocks[0])
+    rig.send(blocks[1])
+    assert rig.send(blocks[0]) == []
+    rig.send(blocks[2])
+    crc = table_crc(rows.tobytes())
+    assert isinstance(rig.ask(Arm(0, 1000, crc, 0, 0)), Armed)
+
+
+def test_the_first_credit_follows_the_answer(stream):
+    rig, _ = stream()
+    order = TableOpen(FEED, 1, 1000, 1, 7, True)
+    assert [type(one) for one in rig.send(order)] == [TableState, Credit]
 
 
 def test_a_lost_credit_comes_again_with_the_heartbeat(stream):

@@ -217,6 +217,12 @@ def test_an_armed_trial_can_be_forgotten_and_armed_again(bench, move):
     assert isinstance(rig.ask(Disarm(0)), Done)
     assert rig.beat.state == RigState.READY
     assert isinstance(rig.ask(Disarm(0)), Done)
+    assert rig.ask(Start(0, rig.tick() + 1000)).code == Refusal.WRONG_TRIAL
+    assert rig.ask(Resend(0, ())).code == Refusal.NOT_KEPT
+    rig.heard.clear()
+    rig.wait(500)
+    assert (rig.beat.trial, rig.beat.state) == (0, RigState.READY)
+    assert not rig.of(Started)
     done, _ = rig.trial(0, *move)
     assert done.reason == FinishReason.COMPLETE
 
@@ -290,6 +296,7 @@ def test_a_hello_in_a_trial_ends_it_with_a_controlled_stop_and_no_report(bench, 
     assert rig.beat.state == RigState.READY
     assert not rig.of(Finished)
     assert not rig.of(Samples)
+    assert rig.ask(Resend(0, ())).code == Refusal.NOT_KEPT
 
 
 def test_blocks_are_as_full_as_the_line_allows(bench, move):

@@ -117,6 +117,7 @@ def require_channels(name: str, used: Iterable[str], outputs: tuple[OutputChanne
 
 def guard_table() -> dict[str, tuple[Stage, type[Any]]]:
     """Stage and settings class of each guard by its name, in the order in which they judge."""
+    from trialrunner.core.guards.bands import Bands
     from trialrunner.core.guards.cusum import Cusum
     from trialrunner.core.guards.divergence import Divergence
     from trialrunner.core.guards.error_growth import ErrorGrowth
@@ -133,5 +134,6 @@ def guard_table() -> dict[str, tuple[Stage, type[Any]]]:
         "error_growth": (Stage.LEARNING, ErrorGrowth),
         "cusum": (Stage.LEARNING, Cusum),
         "ewma": (Stage.LEARNING, Ewma),
+        "bands": (Stage.LEARNING, Bands),
         "saturation": (Stage.LEARNING, Saturation),
     }

@@ -156,6 +156,18 @@ def test_the_chamber_without_its_loop_answers_as_first_order_with_delay(
     assert np.max(np.abs(measured - 30.0 - rise)) <= 0.5 * chamber.SENSOR_K + 1e-9
 
 
+def test_the_chambers_sensor_is_as_noisy_as_stated(monkeypatch: pytest.MonkeyPatch) -> None:
+    """s^2 + q^2 / 12: rounding adds like uniform noise, for s is as large as q (Widrow)."""
+    monkeypatch.setattr(chamber, "POWER_NOISE_W", 0.0)
+    monkeypatch.setattr(chamber, "PROPORTIONAL_W_PER_K", 0.0)
+    plant = chamber.Chamber(1)
+    plant.begin(0, [30.0], Disturbance())
+    measured = np.array([plant.step([0.0], [30.0])[0][0] for _ in range(20_000)])
+    expected = chamber.SENSOR_NOISE_K**2 + chamber.SENSOR_K**2 / 12.0
+    # Differences of neighbours, so that slow changes of the air itself do not count.
+    assert np.var(np.diff(measured)) / 2.0 == pytest.approx(expected, rel=0.05)
+
+
 def test_rounding_to_the_encoder_step_has_the_variance_of_uniform_noise() -> None:
     """q^2 / 12 and no mean: Widrow's model of quantisation, for positions spread over many q."""
     axis = Axis(X_AXIS, 0.002, 8)

@@ -209,6 +209,24 @@ def test_an_early_load_limit_is_reported_and_holds_the_plant_back(name: str) -> 
     assert np.any(healthy != held)
 
 
+def test_the_chambers_loop_takes_a_constant_heat_away_in_the_end() -> None:
+    reference = resting("chamber", 1200)
+    outputs, _ = play(PLANTS["chamber"](1), reference, np.full((1200, 1), 40.0))
+    assert np.max(outputs) > REST["chamber"] + 1.0
+    assert np.max(np.abs(outputs[-100:] - REST["chamber"])) < 0.1
+
+
+def test_the_chambers_loop_does_not_wind_up_while_the_heater_is_at_its_limit() -> None:
+    """Hours at an unreachable 90 degrees are forgotten once 45 are wanted."""
+    reference = resting("chamber", 1000)
+    reference[1:600], reference[600:] = 90.0, 45.0
+    fault = Disturbance(load_limit=0.3, noise=0.0)
+    outputs, others = play(PLANTS["chamber"](1), reference, None, fault)
+    assert np.all(others[20:600, 0] == 1.0)
+    assert np.max(outputs) < 80.0
+    assert np.max(np.abs(outputs[900:] - 45.0)) < 1.5
+
+
 def test_only_the_axis_at_its_limit_says_so() -> None:
     reference = resting("bead_gantry", 20)
     force = np.zeros((20, 2))

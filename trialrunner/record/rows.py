@@ -3,10 +3,10 @@
 import json
 import platform
 from dataclasses import asdict, dataclass, replace
-from importlib.metadata import version as version_of
 from typing import Any
 
 import numpy as np
+import scipy
 
 from drivers.messages import Channel
 from trialrunner.agreement import LimitsInForce
@@ -107,7 +107,7 @@ def platform_json() -> str:
         "machine": platform.machine(),
         "python": platform.python_version(),
         "numpy": np.__version__,
-        "scipy": version_of("scipy"),
+        "scipy": scipy.__version__,
     }
     return json.dumps(found)
 

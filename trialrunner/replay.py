@@ -293,9 +293,10 @@ def _decisions(then: Side, now: Side) -> Iterator[str]:
 def _words(verdict: Verdict) -> str:
     """A verdict with its number in full: two that differ in the last bit must look so."""
     word = "void" if verdict.void else verdict.level.word
-    if verdict.level is Level.PASS and not verdict.void:
+    if not verdict.reason and verdict.value == verdict.limit == 0.0:
         return word
-    return f"{word} ({verdict.value!r}, limit {verdict.limit!r}: {verdict.reason})"
+    reason = f": {verdict.reason}" if verdict.reason else ""
+    return f"{word} ({verdict.value!r}, limit {verdict.limit!r}{reason})"
 
 
 def _same_verdict(then: Verdict, now: Verdict) -> bool:

@@ -283,6 +283,12 @@ def test_what_a_record_cannot_answer_is_a_usage_error(world, override):
             "UPDATE verdicts SET level = 'warn' WHERE entry = 4 AND place = 1",
             "trial 2: start_state",
         ),
+        (
+            "UPDATE verdicts SET value = 7.0 WHERE entry = 4 AND place = 1",
+            "trial 2: start_state: pass (7.0, limit 0.0) -> pass",
+        ),
+        ("UPDATE verdicts SET bound = 7.0 WHERE entry = 4 AND place = 1", "trial 2: start_state"),
+        ("UPDATE verdicts SET void = 1 WHERE entry = 4 AND place = 1", "trial 2: start_state"),
         ("DELETE FROM verdicts WHERE entry = 4 AND place = 1", "trial 2: start_state"),
         (
             "UPDATE entries SET state = replace(state, '\"updates\":2', '\"updates\":3') "

@@ -128,6 +128,30 @@ def test_a_finished_record_on_a_read_only_medium_can_be_read(parts, public_folde
             assert reader.verify() == []
 
 
+def test_a_log_on_a_read_only_medium_is_read_or_spoken_of(
+    parts, public_folder, as_plain_user, tmp_path
+):
+    """An empty one says nothing; one with trials in it must not be passed over."""
+    busy = parts.new_writer(tmp_path / "busy.trialrecord")
+    parts.fill(busy, 2)
+    path = public_folder / "run.trialrecord"
+    log = path.with_name(path.name + "-wal")
+    path.write_bytes(busy.path.read_bytes())
+    log.write_bytes(busy.path.with_name(busy.path.name + "-wal").read_bytes())
+    busy.close()
+    public_folder.chmod(0o555)
+    with as_plain_user(), pytest.raises(RecordUnwritable, match="check the permissions"):
+        RecordReader(path)
+    public_folder.chmod(0o755)
+    with RecordReader(path) as reader:
+        assert reader.n_trials == 2
+    parts.open_writer(path).close()
+    log.touch()
+    public_folder.chmod(0o555)
+    with as_plain_user(), RecordReader(path) as reader:
+        assert reader.n_trials == 2
+
+
 def test_a_record_that_turns_read_only_under_way_stops_the_writer(parts, writer):
     """As when a file system is mounted anew after an error."""
     writer._db.execute("PRAGMA query_only = 1")

@@ -298,7 +298,7 @@ class Runner:
 
     def _strike(self, trial: Trial, now_ns: int) -> bool:
         """Faults that end the trial in its middle; true if one did."""
-        half = trial.n_samples // 2
+        half = max(1, trial.n_samples // 2)
         if "crash" in trial.faults and trial.count == half:
             raise Crash(trial.faults["crash"])
         if "emergency_stop" in trial.faults and trial.count == half:

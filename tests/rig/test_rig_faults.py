@@ -331,6 +331,15 @@ def test_an_emergency_stop_cannot_be_cleared_while_the_button_is_pressed(bench, 
     assert rig.beat.state == RigState.READY
 
 
+@pytest.mark.parametrize("fault", ["emergency_stop", "drive_fault"])
+def test_a_trial_of_one_sample_can_be_stopped_too(bench, fault):
+    rig = bench(faults=[f"{fault}@trial=0"])
+    rig.arm(0, [0.0], [0.0])
+    rig.start(0)
+    assert rig.until(Finished).count == 1
+    assert rig.beat.state == RigState.SAFE
+
+
 def test_a_drive_fault_ends_the_trial_at_its_share_in_the_safe_state(bench, move):
     rig = bench(faults=["drive_fault@trial=0,size=0.3"])
     rig.arm(0, *move)

@@ -74,6 +74,24 @@ def test_after_a_wrong_checksum_the_whole_table_is_sent_again(bench, move):
     assert rig.ask(TableClose(FEED, 1)).verified
 
 
+def test_the_first_arrival_of_a_sample_holds(bench, move):
+    rig = bench()
+    rows = rig.rows(move[0])
+    rig.open(FEED, rows)
+    rig.send(rig.blocks(FEED, rows, size=60)[1])
+    for block in rig.blocks(FEED, np.roll(rows, 1), size=60)[:2]:
+        rig.send(block)
+    for block in rig.blocks(FEED, rows, size=60)[2:]:
+        rig.send(block)
+    assert not rig.ask(TableClose(FEED, 1)).verified
+    rig.open(FEED, rows, revision=2)
+    for block in rig.blocks(FEED, rows, revision=2, size=60):
+        rig.send(block)
+    for block in rig.blocks(FEED, np.roll(rows, 1), revision=2, size=60):
+        rig.send(block)
+    assert rig.ask(TableClose(FEED, 2)).verified
+
+
 def test_a_late_block_cannot_change_a_verified_table(bench, move):
     rig = bench()
     rig.arm(0, *move)

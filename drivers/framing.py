@@ -36,16 +36,17 @@ class FrameSplitter:
             self._skipping, rest = True, b""
         self._rest = rest
         # Two delimiters in a row are allowed: a sender may flush the line with one.
-        return [frame for stuffed in whole if stuffed and (frame := self._unstuff(stuffed))]
+        unstuffed = [self._unstuff(stuffed) for stuffed in whole if stuffed]
+        return [frame for frame in unstuffed if frame is not None]
 
-    def _unstuff(self, stuffed: bytes) -> bytes:
-        """Empty for what is too long or cannot be."""
+    def _unstuff(self, stuffed: bytes) -> bytes | None:
+        """None for what is too long or cannot be."""
         if len(stuffed) > self._max_stuffed:
             self.errors["length"] += 1
-            return b""
+            return None
         try:
             frame: bytes = cobs.decode(stuffed)
         except cobs.DecodeError:
             self.errors["cobs"] += 1
-            return b""
+            return None
         return frame

@@ -166,5 +166,5 @@ def test_the_longest_frame_fits_with_the_most_stuffing() -> None:
     splitter = FrameSplitter(MAX_FRAME)
     longest = b"\x01" * MAX_FRAME
     assert splitter.feed(stuff(longest)) == [longest]
-    assert splitter.feed(cobs.encode(b"\x01" * (MAX_FRAME + 2)) + b"\0") == []
+    assert splitter.feed(cobs.encode(b"\x01" * (MAX_FRAME + 1)) + b"\0") == []
     assert splitter.errors == {"length": 1}

@@ -26,6 +26,7 @@ from trialrunner.record import RecordError
 from trialrunner.rig_line import RigLine
 from trialrunner.run_keeper import RunKeeper
 from trialrunner.run_parts import Built, RunRefused, SessionSettings, same_rig
+from trialrunner.sample_watch import SampleWatch
 from trialrunner.timers import SECOND_NS, Timers
 from trialrunner.update_job import PendingRequest
 
@@ -61,6 +62,7 @@ class Session:
         """Why somebody asked for the pause or end that waits for the trial boundary."""
         self.keeper = RunKeeper(executor, clock, wake)
         self.jobs = self.keeper.jobs
+        self._watch = SampleWatch(None)
         self.timers = Timers(clock)
 
         def converse(link: Link) -> Conversation:
@@ -172,7 +174,9 @@ class Session:
             return
         if self.built is None:
             self.keeper.take_up(self._build(greeted))
-            n_samples = len(self.keeper.run.intake.reference)
+            run = self.keeper.run
+            self._watch = SampleWatch(run.advancer.envelope(run.intake.reference))
+            n_samples = len(run.intake.reference)
             self.observer.built(greeted.greeting.name, n_samples, self.state)
         if self.state.over:
             self._event(Event.END, f"the record says that the run is over: {self.state.over}")
@@ -217,6 +221,9 @@ class Session:
 
     def _on_samples(self, event: rig.SamplesArrived) -> None:
         self.observer.samples(event.first + event.count)
+        breach = self._watch.breach(event, self.state.purpose)
+        if breach and self.cycle.state is not State.HALTED:
+            self._halt(breach)
 
     def _on_finished(self, _: rig.TrialFinished) -> None:
         self._flight.finished()
@@ -324,6 +331,7 @@ class Session:
             return
         intake = self.built.intake
         trial, timing = self._flight.land(intake, self.state, self.keeper.carry)
+        trial = self._watch.landed(trial)
         self.timers.start("deadline", self.settings.update_deadline_s, self._deadline)
         self.keeper.update(trial, timing, self._on_outcome)
         self.observer.trace(trial, intake.period_s)
@@ -335,6 +343,7 @@ class Session:
     def _on_outcome(self, outcome: Outcome) -> None:
         self.timers.cancel("deadline")
         self.observer.outcome(outcome)
+        self._watch.judged(outcome)
         if outcome.late:
             return
         if outcome.action == "halt":

@@ -1,10 +1,10 @@
 """Gathers the samples of one trial: any order, duplicates harmless, gaps named."""
 
 import numpy as np
-from drivers.tables import missing_spans, table_crc
 from numpy.typing import NDArray
 
 from drivers.messages import Finished, FinishReason, Samples
+from drivers.tables import missing_spans, table_crc
 from trialrunner.conversation.events import Collected
 
 
@@ -36,6 +36,10 @@ class Collector:
         self._rows[block.first : end] = rows
         self._here[block.first : end] = True
         return block.first, count
+
+    def rows(self, first: int, end: int) -> NDArray[np.float64]:
+        """Samples `first` to `end - 1` as they are now; NaN where nothing has arrived."""
+        return self._rows[first:end].astype(np.float64)
 
     def missing(self) -> tuple[tuple[int, int], ...]:
         """Gaps below the rig's own count, at most MAX_RANGES of them."""

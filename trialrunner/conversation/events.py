@@ -57,6 +57,14 @@ class SamplesArrived(RigEvent):
 
     first: int
     count: int
+    rows: NDArray[np.float64]
+    """(count or count + 1, n_outputs + n_auxiliary): from the sample before `first` on, if there
+    is one; NaN where it has not arrived."""
+
+    @property
+    def first_row(self) -> int:
+        """Number of the sample in row 0."""
+        return max(self.first - 1, 0)
 
 
 @dataclass(frozen=True)

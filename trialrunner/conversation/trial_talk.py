@@ -223,7 +223,9 @@ class TrialTalk:
             return
         new = self._collector.take(block)
         if new is not None:
-            self._around.emit(SamplesArrived(*new))
+            first, count = new
+            rows = self._collector.rows(max(first - 1, 0), first + count)
+            self._around.emit(SamplesArrived(first, count, rows))
 
     def on_credit(self, credit: Credit) -> None:
         if credit.table in self._senders:

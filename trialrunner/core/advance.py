@@ -13,8 +13,10 @@ import numpy as np
 
 from trialrunner.core import ladder
 from trialrunner.core.decision import Rules
+from trialrunner.core.envelope import Envelope
 from trialrunner.core.errors import CoreError, SettingError, TransitionError, require_shape
 from trialrunner.core.guards import ChecksChannels, GuardContext, Stage, guard_table
+from trialrunner.core.guards.envelope import Envelope as EnvelopeGuard
 from trialrunner.core.ladder import Act, Decision
 from trialrunner.core.laws import LawContext
 from trialrunner.core.learning import Learner
@@ -68,6 +70,15 @@ class Advancer:
         self._guards = _guards(settings)
         asked = (guard for stage in self._guards.values() for guard in stage.values())
         self._n_charts = sum(getattr(guard, "CHARTS", 0) for guard in asked)
+
+    def envelope(self, reference: Array) -> Envelope | None:
+        """Limits to check samples by while they stream in, (n_samples, n_outputs); None: none."""
+        guard = self._guards[Stage.ADMISSION].get(EnvelopeGuard.NAME)
+        if guard is None:
+            return None
+        settings = self._settings
+        limits = guard.limits(settings.outputs, settings.horizon.period_s, reference)
+        return None if limits.is_off else limits
 
     def begin(self, initial_feedforward: Array | None = None) -> tuple[RunState, Carry]:
         """State and arrays before trial 0; starts from zero unless a feedforward is given.

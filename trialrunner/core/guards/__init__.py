@@ -120,6 +120,7 @@ def guard_table() -> dict[str, tuple[Stage, type[Any]]]:
     from trialrunner.core.guards.bands import Bands
     from trialrunner.core.guards.cusum import Cusum
     from trialrunner.core.guards.divergence import Divergence
+    from trialrunner.core.guards.envelope import Envelope
     from trialrunner.core.guards.error_growth import ErrorGrowth
     from trialrunner.core.guards.ewma import Ewma
     from trialrunner.core.guards.integrity import Integrity
@@ -130,6 +131,7 @@ def guard_table() -> dict[str, tuple[Stage, type[Any]]]:
         "integrity": (Stage.ADMISSION, Integrity),
         "start_state": (Stage.ADMISSION, StartState),
         "start_timing": (Stage.ADMISSION, StartTiming),
+        "envelope": (Stage.ADMISSION, Envelope),
         "divergence": (Stage.LEARNING, Divergence),
         "error_growth": (Stage.LEARNING, ErrorGrowth),
         "cusum": (Stage.LEARNING, Cusum),

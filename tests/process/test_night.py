@@ -317,3 +317,14 @@ def test_a_record_of_another_program_is_refused(bench):
     assert daemon.wait(PATIENCE_S) == ExitCode.RECORD
     assert "is not a record" in bench.log()
     assert bench.record.read_bytes().startswith(b"SQLite it is not")
+
+
+def test_a_killed_daemon_waits_over_zeromq_until_the_rig_has_given_it_up(bench):
+    bench.rig("--watchdog-ms", "10000", link="zmq")
+    changes = {"stop.trials": 4, "stop.floor_trials": 0, "link.silence_s": 20.0}
+    daemon = bench.daemon(**changes)
+    bench.until_trial(1)
+    daemon.send_signal(signal.SIGKILL)
+    daemon.wait()
+    assert bench.end(bench.daemon(**changes)) == ExitCode.OK
+    assert "another daemon is alive" in bench.log()

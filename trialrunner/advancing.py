@@ -21,13 +21,16 @@ def settings_in_force(settings: RunSettings, limits: LimitsInForce) -> RunSettin
 
 
 def make_advancer(
-    settings: RunSettings, limits: LimitsInForce, reference: Array, sample_type: str
+    settings: RunSettings,
+    limits: LimitsInForce,
+    reference: Array,
+    sample_type: str,
+    auxiliary: tuple[str, ...] = (),
 ) -> Advancer:
     """`reference` is (n_samples, n_outputs), in numbers of the rig's `sample_type`, "f4" or "f8".
-
-    Raises SettingError.
+    `auxiliary` names the rig's auxiliary channels in its order. Raises SettingError.
     """
-    settings = settings_in_force(settings, limits)
+    settings = replace(settings_in_force(settings, limits), auxiliary=auxiliary)
     context = LawContext(
         period_s=settings.horizon.period_s,
         n_samples=settings.horizon.n_samples,

@@ -79,7 +79,9 @@ class Builder:
         limits = limits_in_force(self.config, channels)
         sample_type = greeted.greeting.sample_type
         reference = self.config.load_reference().astype(f"<{sample_type}").astype(np.float64)
-        advancer = make_advancer(self.config.run_settings(), limits, reference, sample_type)
+        names = tuple(channel.name for channel in greeted.auxiliary)
+        settings = self.config.run_settings()
+        advancer = make_advancer(settings, limits, reference, sample_type, names)
         intake = Intake(greeted, reference)
         writer = self._record(advancer, greeted, limits, reference)
         return Built(advancer, writer, intake, writer.state, writer.carry)

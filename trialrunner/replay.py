@@ -104,7 +104,9 @@ class Replay:
         _require_same_channels(then, now)
         self._from_file = now.run.initial_feedforward is not None
         limits = limits_in_force(now, facts.channels())
-        return make_advancer(now.run_settings(), limits, self._reader.reference, facts.sample_type)
+        names = facts.auxiliary_names()
+        settings, reference = now.run_settings(), self._reader.reference
+        return make_advancer(settings, limits, reference, facts.sample_type, names)
 
     def _begin(self) -> None:
         """Before trial 0. A configured first feedforward is taken from the record: its file may

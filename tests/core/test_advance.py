@@ -165,7 +165,7 @@ def test_a_guard_that_is_off_is_not_asked(bench: Make) -> None:
 def test_learning_guards_see_no_void_trial(bench: Make) -> None:
     """Only admission speaks about a trial that does not count."""
     names = {verdict.guard for verdict in bench().play_void().verdicts}
-    assert names == {"integrity", "start_state", "start_timing"}
+    assert names == {"integrity", "start_state", "start_timing", "envelope"}
     names = {verdict.guard for verdict in bench().play().verdicts}
     assert names >= {"integrity", "divergence", "error_growth", "saturation"}
 
@@ -177,7 +177,7 @@ def test_an_error_that_is_no_number_never_teaches_even_without_integrity(bench: 
     before = rig.carry
     outcome = rig.play(output=np.full((N, 1), np.inf))
     assert outcome.void
-    assert [verdict.guard for verdict in outcome.verdicts][-2:] == ["start_timing", "ladder"]
+    assert [verdict.guard for verdict in outcome.verdicts][-2:] == ["envelope", "ladder"]
     assert rig.carry is before
 
 

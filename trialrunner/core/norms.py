@@ -59,6 +59,19 @@ class Repeatability:
         return float(np.sqrt(np.mean(variance / np.square(scales))))
 
 
+def path_repeatability(paths: Array) -> float:
+    """Path repeatability as ISO 9283 defines it (RT_p), in the unit of `paths`.
+
+    The largest over the samples of mean + 3 standard deviations of the trials' distances from
+    their mean path; the standard deviation has n - 1 degrees of freedom. `paths`: (n_trials,
+    n_samples, n_axes), all axes in one unit of length; NaN for fewer than two trials.
+    """
+    if len(paths) < 2:
+        return float("nan")
+    distances = np.linalg.norm(paths - paths.mean(axis=0), axis=2)
+    return float(np.max(distances.mean(axis=0) + 3.0 * distances.std(axis=0, ddof=1)))
+
+
 def repeatability_floor(errors: Array, scales: Array) -> float:
     """Root mean square of the deviation from the mean trial, in units of `error_norm`.
 

@@ -63,6 +63,10 @@ class RunFacts:
         roles = ("inputs", "outputs", "auxiliary")
         return tuple(Channel(**values) for role in roles for values in self.rig.get(role, ()))
 
+    def auxiliary_names(self) -> tuple[str, ...]:
+        """Names of the rig's auxiliary channels, in its order."""
+        return tuple(channel["name"] for channel in self.rig.get("auxiliary", ()))
+
     def units(self, role: str) -> tuple[str, ...]:
         """UCUM codes of the rig's `inputs`, `outputs` or `auxiliary` channels, in its order."""
         return tuple(channel["unit"] for channel in self.rig.get(role, ()))

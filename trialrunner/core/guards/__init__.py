@@ -123,6 +123,7 @@ def guard_table() -> dict[str, tuple[Stage, type[Any]]]:
     from trialrunner.core.guards.envelope import Envelope
     from trialrunner.core.guards.error_growth import ErrorGrowth
     from trialrunner.core.guards.ewma import Ewma
+    from trialrunner.core.guards.health import Health
     from trialrunner.core.guards.integrity import Integrity
     from trialrunner.core.guards.saturation import Saturation
     from trialrunner.core.guards.start import StartState, StartTiming
@@ -138,4 +139,5 @@ def guard_table() -> dict[str, tuple[Stage, type[Any]]]:
         "ewma": (Stage.LEARNING, Ewma),
         "bands": (Stage.LEARNING, Bands),
         "saturation": (Stage.LEARNING, Saturation),
+        "health": (Stage.LEARNING, Health),
     }

@@ -5,6 +5,7 @@ from dataclasses import replace
 from trialrunner.agreement import LimitsInForce
 from trialrunner.core.advance import Advancer
 from trialrunner.core.laws import LawContext
+from trialrunner.core.plant_model import build_plant
 from trialrunner.core.settings import RunSettings
 from trialrunner.core.trial import Array
 
@@ -40,5 +41,6 @@ def make_advancer(
         low=limits.low,
         high=limits.high,
         rate_per_s=limits.rate_per_s,
+        plant=build_plant(settings.model, settings.horizon.period_s),
     )
     return Advancer(settings, context, sample_type)

@@ -14,6 +14,7 @@ from trialrunner.config.problems import Problem
 from trialrunner.core.errors import CoreError
 from trialrunner.core.guards import ChecksChannels
 from trialrunner.core.laws import LawContext
+from trialrunner.core.plant_model import build_plant
 from trialrunner.core.settings import InputChannel, OutputChannel
 from trialrunner.core.trial import Array
 from trialrunner.reference import ProfileReference
@@ -186,6 +187,10 @@ def _range_problems(
 
 def _law_problems(config: Config, reference: Array) -> list[Problem]:
     """Whether the law accepts the channels and the horizon; it knows best itself."""
+    try:
+        plant = build_plant(config.model, config.trial.period_s)
+    except CoreError as error:
+        return [_core_problem(error, ("model",))]
     context = LawContext(
         period_s=config.trial.period_s,
         n_samples=config.trial.n_samples,
@@ -195,6 +200,7 @@ def _law_problems(config: Config, reference: Array) -> list[Problem]:
         low=np.array([one.low for one in config.inputs]),
         high=np.array([one.high for one in config.inputs]),
         rate_per_s=np.array([one.rate_limit_per_s for one in config.inputs]),
+        plant=plant,
     )
     try:
         config.law.build(context)

@@ -14,6 +14,11 @@ from trialrunner.config.tables import LinkTable, OperatorTable, RehearsalTable, 
 from trialrunner.core.bounds import STRICT
 from trialrunner.core.guards import guard_table
 from trialrunner.core.laws import law_table
+from trialrunner.core.plant_model import (
+    ImpulseResponseSettings,
+    StateSpaceSettings,
+    TransferFunctionSettings,
+)
 from trialrunner.core.settings import (
     FilterSettings,
     Horizon,
@@ -39,6 +44,11 @@ _MODEL = cast(ConfigDict, {**STRICT, "frozen": True})
 Inputs = Annotated[tuple[InputChannel, ...], MinLen(1), MaxLen(MAX_CHANNELS)]
 Outputs = Annotated[tuple[OutputChannel, ...], MinLen(1), MaxLen(MAX_CHANNELS)]
 Reference = Annotated[ProfileReference | FileReference | RigReference, Field(discriminator="kind")]
+
+Model = Annotated[
+    StateSpaceSettings | TransferFunctionSettings | ImpulseResponseSettings,
+    Field(discriminator="kind"),
+]
 
 if TYPE_CHECKING:
     Law = Any
@@ -73,6 +83,8 @@ class Config(BaseModel):
     """What the outputs are to follow."""
     law: Law
     """How an error becomes a feedforward."""
+    model: Model | None = None
+    """The plant model, for laws that need one: from the feedforward to the outputs."""
     filter: FilterSettings = Field(default_factory=FilterSettings)
     learn: LearnSettings = Field(default_factory=LearnSettings)
     guards: Guards = Field(default_factory=Guards if not TYPE_CHECKING else dict)
@@ -126,6 +138,7 @@ class Config(BaseModel):
             inputs=self.inputs,
             outputs=self.outputs,
             law=self.law,
+            model=self.model,
             filter=self.filter,
             learn=self.learn,
             guards=self.guard_settings(),

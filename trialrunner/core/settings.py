@@ -178,3 +178,5 @@ class RunSettings:
     stop: StopSettings = field(default_factory=StopSettings)
     auxiliary: tuple[str, ...] = ()
     """Names of the rig's auxiliary channels in its order; empty where they are not known."""
+    model: Any = None
+    """Settings value of the plant model, from plant_model; None if there is none."""

@@ -7,6 +7,8 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any, Protocol
 
+from trialrunner.core.errors import SettingError
+from trialrunner.core.plant_model import PlantModel
 from trialrunner.core.trial import Array, Memory, Purpose, Trial
 
 
@@ -26,6 +28,8 @@ class LawContext:
     """(n_inputs,)."""
     rate_per_s: Array
     """(n_inputs,): rate limit; infinity where there is none."""
+    plant: PlantModel | None = None
+    """From the table [model]; None if there is none."""
 
 
 @dataclass(frozen=True)
@@ -59,8 +63,26 @@ class LawSettings(Protocol):
         """Raises SettingError if the settings do not fit the channels or the horizon."""
 
 
+def required_plant(context: LawContext, kind: str) -> PlantModel:
+    """The plant model. Raises SettingError if there is none or its channels are not the run's."""
+    plant = context.plant
+    if plant is None:
+        raise SettingError(
+            f"law.kind: {kind} expected a plant model, found none; add a table [model]"
+        )
+    found = (plant.n_inputs, plant.n_outputs)
+    if found != (context.n_inputs, context.n_outputs):
+        raise SettingError(
+            f"model: expected {context.n_inputs} inputs and {context.n_outputs} outputs as the run "
+            f"has, found {found[0]} and {found[1]}"
+        )
+    return plant
+
+
 def law_table() -> dict[str, type[Any]]:
     """Settings class of each law by its `kind`; imported late because laws may be heavy."""
+    from trialrunner.core.laws.gradient import GradientSettings
+    from trialrunner.core.laws.inverse import InverseSettings
     from trialrunner.core.laws.pd import PdSettings
 
-    return {"pd": PdSettings}
+    return {"pd": PdSettings, "inverse": InverseSettings, "gradient": GradientSettings}

@@ -71,11 +71,10 @@ class StoredTable:
         rows = np.frombuffer(block.data, self._dtype).reshape(count, -1)
         if self.opened.streamed:
             return self._take_next(block.first, rows)
-        if not self.verified:
-            # Where a sample is already here, the first arrival holds.
-            fresh = ~self._here[block.first : block.first + count]
-            self._rows[block.first : block.first + count][fresh] = rows[fresh]
-            self._here[block.first : block.first + count] = True
+        # Where a sample is already here, the first arrival holds: a verified table never changes.
+        fresh = ~self._here[block.first : block.first + count]
+        self._rows[block.first : block.first + count][fresh] = rows[fresh]
+        self._here[block.first : block.first + count] = True
         return True
 
     def _take_next(self, first: int, rows: NDArray[np.floating]) -> bool:
@@ -119,11 +118,10 @@ class StoredTable:
 
     @property
     def ready(self) -> bool:
-        """Enough is here to arm, and nothing of it was played before."""
+        """Enough is here to arm."""
         if not self.opened.streamed:
             return self.verified
-        enough = self._have >= min(self._capacity, self.opened.n_samples)
-        return enough and not self.used
+        return self._have >= min(self._capacity, self.opened.n_samples)
 
     @property
     def used(self) -> bool:

@@ -165,6 +165,15 @@ def test_a_late_block_comes_after_the_end_of_its_trial(spoiled):
     assert len(blocks_of(rig)) == seen + 1
 
 
+def test_a_late_block_of_an_old_session_never_comes(bench, move):
+    rig = bench(faults=["late@trial=0,size=0.3"])
+    rig.trial(0, *move)
+    rig.hello(session=78)
+    rig.heard.clear()
+    rig.wait(1000)
+    assert not rig.of(Samples)
+
+
 # -- answers --------------------------------------------------------------------------------
 
 

@@ -1,5 +1,7 @@
 """Tables: checked before anything is played, whole or streamed."""
 
+import dataclasses
+
 import numpy as np
 import pytest
 
@@ -58,6 +60,22 @@ def test_a_table_of_another_checksum_is_never_played(bench, move):
         refused = rig.ask(Arm(0, len(rows), crc, ref_crc, 0))
         assert refused.code == Refusal.TABLE_UNVERIFIED
     assert not rig.of(Armed)
+
+
+def test_only_the_announced_tables_of_the_announced_length_are_played(bench, move):
+    rig = bench()
+    rig.load(FEED, move[0])
+    rig.load(REF, move[1])
+    right = rig.arm_order(0, *move)
+    for change in (
+        {"feedforward_crc": right.feedforward_crc ^ 1},
+        {"reference_crc": right.reference_crc ^ 1},
+        {"n_samples": 199},
+        {"n_samples": 201},
+    ):
+        refused = rig.ask(dataclasses.replace(right, **change))
+        assert refused.code == Refusal.TABLE_UNVERIFIED
+    assert isinstance(rig.ask(right), Armed)
 
 
 def test_after_a_wrong_checksum_the_whole_table_is_sent_again(bench, move):
@@ -288,6 +306,18 @@ def test_a_lost_block_is_told_by_the_next_credit_and_nothing_after_it_is_taken(s
     rig.heard.clear()
     rig.send(blocks[2])
     assert {(one.have, one.upto) for one in rig.of(Credit)} == {(50, 150)}
+
+
+def test_a_block_that_does_not_fit_into_the_memory_is_dropped(stream):
+    rig, values = stream()
+    rows = rig.rows(values)
+    rig.open(FEED, rows, streamed=True)
+    for block in rig.blocks(FEED, rows[:140], size=20):
+        rig.send(block)
+    rig.send(TableBlock(FEED, 1, 140, rows[140:160].tobytes()))
+    rig.heard.clear()
+    rig.wait(300)
+    assert (rig.of(Credit)[-1].have, rig.of(Credit)[-1].upto) == (140, 150)
 
 
 def test_a_repeated_block_is_dropped_and_no_credit_is_sent_for_it(stream):

@@ -25,6 +25,7 @@ from drivers.messages import (
     StartMode,
 )
 from drivers.tables import table_crc
+from mock_rig.clock import RigClock
 
 
 def test_a_trial_starts_at_the_ordered_tick_and_ends_whole(bench, move):
@@ -280,6 +281,39 @@ def test_a_rig_that_keeps_nothing_refuses_but_repeats_its_finished(bench, move):
     assert refused.code == Refusal.NOT_KEPT
     rig.ask(Resend(0, ()))
     assert rig.until(Finished) == done
+
+
+def test_a_trial_is_kept_until_the_next_is_armed_or_a_session_opens(bench, move):
+    rig = bench(fast=False)
+    rig.trial(0, *move)
+    rig.wait(300)
+    rig.ask(rig.arm_order(1, *move))
+    assert [rig.ask(Resend(k, ())).code for k in (0, 1)] == [Refusal.NOT_KEPT] * 2
+    rig.start(1)
+    rig.until(Finished)
+    rig.hello(session=78)
+    assert rig.ask(Resend(1, ())).code == Refusal.NOT_KEPT
+
+
+def test_a_slow_trial_is_told_in_parts_every_quarter_of_the_watchdogs_time(bench, move):
+    rig = bench(fast=False, watchdog_ms=100, block_bytes=65536)
+    rig.arm(0, *move)
+    rig.start(0)
+    rig.until(Finished)
+    counts = [len(one.data) // 8 for one in rig.of(Samples)]
+    assert sum(counts) == 200
+    # A sample a millisecond: a quarter of 100 ms and the sample that finds it over.
+    assert max(counts) <= 27
+    assert len(counts) <= 10
+
+
+def test_the_rigs_clock_never_goes_back():
+    clock = RigClock(1_000_000, fast=True)
+    clock.jump_to(5_000_000, 0)
+    clock.jump_to(3_000_000, 0)
+    assert clock.tick(0) == 5_000_000
+    assert clock.tick(1_000_000_000) == 6_000_000
+    assert clock.tick(clock.wall_ns(7_000_001)) == 7_000_001
 
 
 def test_a_hello_in_a_trial_ends_it_with_a_controlled_stop_and_no_report(bench, move):

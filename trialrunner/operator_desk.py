@@ -1,7 +1,7 @@
 """Operator requests at the daemon: what each verb means now, when it takes effect, the answer."""
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any, Protocol
 
 from trialrunner.core.cycle import Cycle, Event, State
@@ -51,7 +51,9 @@ def rule(request: OperatorRequest, now: Situation) -> Ruling:
         return ruling
     if now.built is None:
         return Ruling(False, "the rig has not greeted yet", now.state.trial)
-    refusal = now.built.advancer.refusal(ruling.request, now.state)
+    # The trial under way will have been run by the time that a boundary request takes effect.
+    state = replace(now.state, trial=ruling.trial)
+    refusal = now.built.advancer.refusal(ruling.request, state)
     return Ruling(False, refusal, now.state.trial) if refusal else ruling
 
 

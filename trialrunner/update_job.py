@@ -4,6 +4,7 @@ The executor's thread is the only one that touches the record's connection. The 
 race for the deadline through one claim, so that a late update is either used whole or not at all.
 """
 
+import json
 import threading
 from dataclasses import dataclass, field, replace
 
@@ -81,9 +82,8 @@ def apply_requests(
         try:
             state, carry, _ = advancer.apply_request(pending.request, state, carry, writer.recall)
         except CoreError as error:
-            row = replace(
-                pending.row, ok=False, changes_state=False, why=f"{pending.row.why} ({error})"
-            )
+            said = json.loads(pending.row.answer) | {"ok": False, "text": f"not done: {error}"}
+            row = replace(pending.row, ok=False, changes_state=False, answer=json.dumps(said))
             writer.commit_request(row, state, None)
             continue
         writer.commit_request(pending.row, state, carry)

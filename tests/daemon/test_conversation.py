@@ -378,6 +378,8 @@ def test_a_number_under_way_when_halting_is_not_given_to_another_message(line):
     line.talk.clear("checked")
     line.turn()
     line.lose_up = lambda message: False
+    assert not any(isinstance(m, Clear) for m in line.down)
+    line.beat(RigState.SAFE, fault=FaultCode.HALTED)
     line.until(ev.RigCleared, advance_ms=20)
     assert [type(m) for m in line.rig.executed[-2:]] == [TableOpen, Clear]
 
@@ -465,3 +467,11 @@ def test_a_rig_that_never_returns_is_reported(line):
         line.beat(RigState.RETURNING)
         line.turn(advance_ms=100)
     assert any(isinstance(e, ev.RigSilent) and "not ready" in e.text for e in line.seen)
+
+
+def test_a_state_told_before_the_channels_are_known_is_kept(line):
+    line.talk.connect(line.now)
+    line.turn()
+    line.beat(RigState.READY)
+    line.until(ev.Greeted)
+    assert line.until(ev.RigChanged, limit=1).state is RigState.READY

@@ -90,6 +90,11 @@ class Conversation:
         self._now_ns = self._heard_ns = self._sent_ns = self._waiting_since_ns = now_ns
         self._halt_again_ns = now_ns
         self.greeted = self.heartbeat = None
+        self._early_beat: Heartbeat | None = None
+        self._after_halt: deque[Callable[[], None]] = deque()
+        """Orders that wait until the rig has confirmed a halt."""
+        self._clearing = False
+        """Clear is under way: what the rig still says of our own halt is news of the past."""
         self.clock = ClockSync(1)
         self._ping: tuple[int, int] | None = None
         self._token = 0
@@ -114,6 +119,10 @@ class Conversation:
 
     def prepare(self, trial: int, tables: Sequence[TableData], start: StartMode) -> None:
         """Tables, return, arming, clocks: TrialArmed follows, or RigRefused."""
+        self._after_halt.append(lambda: self._prepare(trial, tables, start))
+        self._go_on_after_halt()
+
+    def _prepare(self, trial: int, tables: Sequence[TableData], start: StartMode) -> None:
         assert self.greeted is not None
         self._waiting_since_ns = self._now_ns
         self._trial.prepare(self.greeted.greeting, trial, tables, start)
@@ -129,13 +138,22 @@ class Conversation:
     def halt(self, category: int, text: str) -> None:
         """To the safe state now; goes ahead of everything and is repeated until it is so."""
         self._halt = Halt(category, _reason(text))
+        self._after_halt.clear()
         self._halt_again_ns = self._now_ns
         self._trial.abandon()
 
     def clear(self, why: str) -> None:
-        """A person asks the rig to leave its safe state: RigCleared follows, or RigRefused."""
-        self._halt = None
-        self._commander.ask(Clear(_reason(why)), self._on_clear)
+        """A person asks the rig to leave its safe state: RigCleared follows, or RigRefused.
+
+        A halt that the rig has not confirmed yet comes first.
+        """
+        self._clearing = True
+        self._after_halt.append(lambda: self._commander.ask(Clear(_reason(why)), self._on_clear))
+        self._go_on_after_halt()
+
+    def _go_on_after_halt(self) -> None:
+        while self._halt is None and self._after_halt:
+            self._after_halt.popleft()()
 
     def close(self) -> None:
         """Say goodbye; SessionClosed follows."""
@@ -254,15 +272,24 @@ class Conversation:
             self._heard_ns = self._now_ns
             self.clock = ClockSync(event.greeting.tick_hz, event.greeting.clock_steps)
         self.events.append(event)
+        if isinstance(event, Greeted) and self._early_beat is not None:
+            self._on_heartbeat(self._early_beat)
 
     def _dispatch(self, message: Message) -> None:
         if isinstance(message, ANSWERS):
             if not self._commander.answered(message.number, message):
                 self.errors["stale answer"] += 1
         elif self.greeted is None:
-            self.errors["before greeting"] += 1
+            self._before_greeting(message)
         else:
             self._on_report(message)
+
+    def _before_greeting(self, message: Message) -> None:
+        """A rig tells its state at once, while its channels are still being asked for."""
+        if isinstance(message, Heartbeat):
+            self._early_beat = message
+        else:
+            self.errors["before greeting"] += 1
 
     def _on_report(self, message: Message) -> None:
         match message:
@@ -279,7 +306,7 @@ class Conversation:
             case Credit():
                 self._trial.on_credit(message)
             case Fault():
-                self.emit(RigFaulted(message.code, message.text))
+                self._on_fault(message.code, message.text)
             case _:
                 self.errors["wrong direction"] += 1
 
@@ -292,13 +319,19 @@ class Conversation:
             self._waiting_since_ns = self._now_ns
             self.emit(RigChanged(RigState(beat.state)))
             if beat.state == RigState.SAFE and self._halt is None:
-                self.emit(RigFaulted(beat.fault, _fault_word(beat.fault)))
+                self._on_fault(beat.fault, _fault_word(beat.fault))
         if beat.state == RigState.SAFE:
             self._halt = None
+            self._go_on_after_halt()
         self._trial.try_arm()
         self._trial.look_for_finish(beat)
 
+    def _on_fault(self, code: int, text: str) -> None:
+        if not (self._clearing and code == FaultCode.HALTED):
+            self.emit(RigFaulted(code, text))
+
     def _on_clear(self, answer: Message) -> None:
+        self._clearing = False
         if isinstance(answer, Refused):
             self.emit(RigRefused("Clear", answer.code, answer.text))
         else:

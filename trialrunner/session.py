@@ -10,6 +10,7 @@ from collections.abc import Callable
 from concurrent.futures import Executor
 from typing import Any, ClassVar
 
+from drivers.errors import LinkBusy
 from drivers.link import Link
 from drivers.messages import FaultCode, Refusal, RigState
 from trialrunner import operator_desk as desk
@@ -32,6 +33,9 @@ from trialrunner.update_job import PendingRequest
 
 STOP_CATEGORY = 1
 """Controlled stop, then power removed: what the daemon asks for (words of IEC 60204-1)."""
+
+BUSY_PATIENCE_S = 60.0
+"""How long a rig may say that it is busy with another daemon, before ours gives up."""
 
 
 class Session:
@@ -60,6 +64,7 @@ class Session:
         self._build = build
         self._wish = ""
         """Why somebody asked for the pause or end that waits for the trial boundary."""
+        self._busy_since_ns = 0
         self.keeper = RunKeeper(executor, clock, wake)
         self.jobs = self.keeper.jobs
         self._watch = SampleWatch(None)
@@ -169,6 +174,7 @@ class Session:
 
     def _on_greeted(self, greeted: rig.Greeted) -> None:
         self.line.greeted()
+        self._busy_since_ns = 0
         if self.built is not None and not same_rig(self.built.intake.greeted, greeted):
             self._halt("another rig, or the same with other channels, answers on the link")
             return
@@ -198,6 +204,9 @@ class Session:
 
     def _on_refused(self, event: rig.RigRefused) -> None:
         text = f"the rig refuses {event.order}: {event.text}"
+        if event.order == "Hello" and event.code == Refusal.BUSY:
+            self._busy(text)
+            return
         if self.built is None:
             raise RunRefused(text)
         if event.order == "Start" and event.code == Refusal.TOO_LATE:
@@ -206,6 +215,15 @@ class Session:
             self.line.lose(text)
         else:
             self._halt(text)
+
+    def _busy(self, text: str) -> None:
+        """Another session is alive: perhaps that of a daemon that died, until the rig's watchdog
+        gives it up. Raises LinkBusy when it lasts."""
+        now_ns = self.clock.now_ns()
+        self._busy_since_ns = self._busy_since_ns or now_ns
+        if now_ns - self._busy_since_ns > BUSY_PATIENCE_S * SECOND_NS:
+            raise LinkBusy(f"{text}; stop the other daemon, or wait until it has gone")
+        self.line.lose(text)
 
     def _on_armed(self, _: rig.TrialArmed) -> None:
         self._event(Event.ARMED, "tables verified, rig at its start, clocks exchanged")

@@ -83,6 +83,12 @@ def law_table() -> dict[str, type[Any]]:
     """Settings class of each law by its `kind`; imported late because laws may be heavy."""
     from trialrunner.core.laws.gradient import GradientSettings
     from trialrunner.core.laws.inverse import InverseSettings
+    from trialrunner.core.laws.norm_optimal import NormOptimalSettings
     from trialrunner.core.laws.pd import PdSettings
 
-    return {"pd": PdSettings, "inverse": InverseSettings, "gradient": GradientSettings}
+    return {
+        "pd": PdSettings,
+        "inverse": InverseSettings,
+        "gradient": GradientSettings,
+        "norm_optimal": NormOptimalSettings,
+    }

@@ -18,6 +18,9 @@ BelowOne = Annotated[float, Ge(0.0), Lt(1.0)]
 InsideUnit = Annotated[float, Gt(0.0), Lt(1.0)]
 InsideTwo = Annotated[float, Gt(0.0), Lt(2.0)]
 AboveOne = Annotated[float, Gt(1.0)]
+MemoryWeight = Annotated[float, Ge(0.02), Le(1.0)]
+"""Weight of the newest value in a moving mean; smaller ones forget too slowly for a chart."""
+
 Count = Annotated[int, Ge(0)]
 PositiveCount = Annotated[int, Ge(1)]
 Name = Annotated[str, MinLen(1)]

@@ -1,13 +1,10 @@
 """EWMA: has the error norm's moving mean left its level?"""
 
 from dataclasses import dataclass
-from typing import Annotated, Any, ClassVar
+from typing import Any, ClassVar
 
-from annotated_types import Ge, Le
-
-from trialrunner.core.bounds import STRICT, NonNegative, Positive, PositiveCount
+from trialrunner.core.bounds import STRICT, MemoryWeight, NonNegative, Positive, PositiveCount
 from trialrunner.core.charts import (
-    LOWEST_WEIGHT,
     ewma_sigma,
     ewma_step_up,
     ewma_up_limit,
@@ -32,7 +29,7 @@ class Ewma:
 
     enabled: bool = True
     action: Action = "warn"
-    weight: Annotated[float, Ge(LOWEST_WEIGHT), Le(1.0)] = 0.1
+    weight: MemoryWeight = 0.1
     """Weight of the newest trial; smaller looks for smaller growth."""
     false_alarm_trials: Positive = 5000.0
     """Wished mean number of trials between false alarms of all charts of a run together."""

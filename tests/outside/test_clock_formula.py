@@ -4,7 +4,7 @@ from trialrunner.core.clock_sync import Exchange
 
 
 def test_worked_example_of_the_two_way_exchange():
-    """T1..T4 = 0, 110, 111, 21: offset 100, delay 20 (field.md W7, recomputed by hand)."""
+    """T1..T4 = 0, 110, 111, 21: offset 100, delay 20, recomputed by hand."""
     exchange = Exchange(0, 110, 111, 21)
     assert exchange.offset_ns == 100
     assert exchange.delay_ns == 20

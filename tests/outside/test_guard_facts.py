@@ -108,7 +108,7 @@ def test_the_known_bad_transient_is_stopped_at_its_second_trial() -> None:
     """A law whose every eigenvalue is 0.5 and whose error grows 1e11 times before it dies.
 
     Source: the example of Bristow, Tharayil and Alleyne 2006, from memory; p_k = k 0.9^(k-1), law
-    0.5 e, N = 50. The norms for a unit step, 7.071, 246.3, 7221, are those of field.md W1, which
+    0.5 e, N = 50. The norms for a unit step, 7.071, 246.3, 7221, are those of the recomputed example, which
     were recomputed there.
     """
     k = np.arange(1, 51)
@@ -147,7 +147,7 @@ def test_an_inverse_law_beyond_its_gain_limit_is_caught(gain: float) -> None:
 def test_the_noise_that_learning_adds_is_no_growth(gain: float) -> None:
     """Noise that differs from trial to trial is amplified at the floor, and stays so.
 
-    Source: Norrlof and Gunnarsson, from memory (field.md W5): with exact inversion the variance of
+    Source: Norrlof and Gunnarsson, from memory: with exact inversion the variance of
     the error is 2 / (2 - gain) times that of the noise.
     """
     rng = np.random.default_rng(3)

@@ -108,8 +108,8 @@ def test_the_known_bad_transient_is_stopped_at_its_second_trial() -> None:
     """A law whose every eigenvalue is 0.5 and whose error grows 1e11 times before it dies.
 
     Source: the example of Bristow, Tharayil and Alleyne 2006, from memory; p_k = k 0.9^(k-1), law
-    0.5 e, N = 50. The norms for a unit step, 7.071, 246.3, 7221, are those of the recomputed example, which
-    were recomputed there.
+    0.5 e, N = 50. The norms for a unit step, 7.071, 246.3, 7221, were recomputed apart from this
+    project's code.
     """
     k = np.arange(1, 51)
     norms = iterate(toeplitz(k * 0.9 ** (k - 1)), 0.5 * np.eye(50), np.ones(50), 6)

@@ -15,6 +15,7 @@ import numpy as np
 from trialrunner.core.bounds import STRICT, InsideTwo, NonNegative
 from trialrunner.core.errors import SettingError
 from trialrunner.core.laws import LawContext, Step, required_plant
+from trialrunner.core.lifted import filtered
 from trialrunner.core.plant_model import Complex
 from trialrunner.core.trial import Array, Memory, Trial
 
@@ -80,10 +81,6 @@ class InverseLaw:
         self, trial: Trial, gain: float, memory: Memory, arrays: Mapping[str, Array]
     ) -> Step:
         error = self._rfft(np.ascontiguousarray(trial.error.T), self._n_fft)
-        feedforward = trial.feedforward.copy()
-        for column, row in zip(feedforward.T, self._inverse, strict=True):
-            total = row[0] * error[0]
-            for one, channel in zip(row[1:], error[1:], strict=True):
-                total += one * channel
-            column += gain * self._irfft(total, self._n_fft)[: len(feedforward)]
-        return Step(feedforward)
+        rows = filtered(self._inverse, error)
+        correction = self._irfft(rows, self._n_fft, overwrite_x=True)
+        return Step(trial.feedforward + gain * correction[:, : len(trial.feedforward)].T)

@@ -27,6 +27,13 @@ FALLING_WEIGHT = 0.3
 LEAST_SPREAD = 0.08
 """Scatter of ln(level) that a band is always allowed."""
 
+SUSPICION = 2.0
+"""Sum of excesses, in standard deviations, from which a band's scatter stays as it was."""
+
+WIDENING = 2.0
+"""Standard deviations of a band's scatter by which the allowed growth is widened: the lowest bands
+hold few cosines and scatter by a third from trial to trial."""
+
 MEAN_TO_SIGMA = math.sqrt(math.pi / 2.0)
 """Mean absolute deviation to standard deviation, for normal noise."""
 
@@ -45,9 +52,9 @@ class Bands:
 
     Learning that diverges does so at high frequency first, many trials before the error norm moves.
     A band must have left its level by more than its scatter explains (CUSUM) and be `growth`
-    times as large. If the feedforward has grown there as well, learning drives it and `action` is
-    asked for, with a bandwidth of the Q-filter that would have prevented it; otherwise rig or
-    sensor changed, which is worth a warning.
+    times as large, or more where it scatters. If the feedforward has grown there as well, learning
+    drives it and `action` is asked for, with a bandwidth of the Q-filter that would have prevented
+    it; otherwise rig or sensor changed, which is worth a warning.
     """
 
     __pydantic_config__: ClassVar[dict[str, Any]] = STRICT
@@ -56,8 +63,9 @@ class Bands:
 
     enabled: bool = True
     action: Action = "freeze"
-    growth: AboveOne = 1.8
-    """Error in a band as a multiple of its level there, below which nothing is said."""
+    growth: AboveOne = 1.6
+    """Error in a band as a multiple of its level there, below which nothing is said; widened by
+    the band's scatter."""
     false_alarm_trials: Positive = 5000.0
     """Wished mean number of trials between false alarms of all charts of a run together."""
     warm_up_trials: PositiveCount = 12
@@ -76,16 +84,17 @@ class Bands:
         n_charts = context.n_charts - self.CHARTS + sums.size
         limit = cusum_limit(SLACK, per_chart(self.false_alarm_trials, n_charts))
         grown = np.exp(error - before.level)
-        odd = (sums > limit) & (grown > self.growth)
+        most = self.growth * np.exp(WIDENING * before.spread)
+        odd = (sums > limit) & (grown > most)
         if not odd.any():
             return before.after(error, pushed, sums).report().passed()
         worst = int(np.argmax(np.where(odd, grown, 0.0)))
         driven = float(pushed[worst] / max(before.pushed[worst], LEAST_PUSH))
-        factor = float(grown[worst])
-        reason = _reason(trial, context, worst, (factor, self.growth, driven), before)
+        factor, allowed = float(grown[worst]), float(most[worst])
+        reason = _reason(trial, context, worst, (factor, allowed, driven), before)
         report = before.after(error, pushed, np.where(odd, 0.0, sums)).report()
         action = self.action if driven >= DRIVEN else "warn"
-        return report.fired(action, reason, factor, self.growth)
+        return report.fired(action, reason, factor, allowed)
 
 
 @dataclass(frozen=True)
@@ -122,6 +131,8 @@ class _Seen:
         weight = 1.0 / n_trials
         away = np.minimum(error - self.level, 2.0 * self.spread)
         size = MEAN_TO_SIGMA * np.abs(np.maximum(away, -3.0 * self.spread))
+        # A growth under suspicion must not pass for scatter.
+        size = np.where(sums > SUSPICION, self.spread, size)
         faster = np.where(away < -2.0 * self.spread, max(weight, FALLING_WEIGHT), weight)
         return _Seen(
             n_trials=n_trials,

@@ -5,7 +5,7 @@ from collections.abc import Iterable
 import pytest
 
 from drivers.errors import LinkLost
-from drivers.memory_link import MemoryLink
+from drivers.memory_link import MAX_HELD_BYTES, MemoryLink
 
 
 def data_of(link: MemoryLink) -> list[bytes]:
@@ -55,6 +55,15 @@ def test_cutting_the_line_is_seen_at_both_ends() -> None:
         for link in pair:
             with pytest.raises(LinkLost, match="the line is cut"):
                 link.receive()
+
+
+def test_what_was_read_is_no_longer_held() -> None:
+    """More than a link holds may go through it."""
+    daemon, rig = MemoryLink.pair()
+    frame = bytes(MAX_HELD_BYTES // 4)
+    for _ in range(6):
+        daemon.send(frame)
+        assert data_of(rig) == [frame]
 
 
 def test_memory_links_need_no_poller() -> None:

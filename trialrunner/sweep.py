@@ -17,7 +17,7 @@ from statistics import fmean
 
 from trialrunner.advancing import make_advancer
 from trialrunner.agreement import limits_in_force
-from trialrunner.config import load_text
+from trialrunner.config import ConfigError, load_text
 from trialrunner.core.advance import LAW, Advancer
 from trialrunner.core.run_state import Carry, RunState
 from trialrunner.core.trial import Level, Memory
@@ -158,8 +158,10 @@ class Task:
 
 @dataclass(frozen=True)
 class TaskResult:
-    findings: tuple[Findings, ...]
-    acted_after: int | None
+    findings: tuple[Findings, ...] = ()
+    acted_after: int | None = None
+    refused: tuple[str, tuple[str, ...]] | None = None
+    """Source and problems of a ConfigError, which itself cannot travel between processes."""
 
 
 def sweep(
@@ -181,6 +183,9 @@ def sweep(
     guards = frozenset(axis.guard for axis in axes)
     tasks = [Task(path, group, guards, fault_at.get(path)) for path in paths for group in groups]
     results = list(executor.map(run_task, tasks))
+    for result in results:
+        if result.refused is not None:
+            raise ConfigError(*result.refused)
     rows = [results[at : at + len(groups)] for at in range(0, len(results), len(groups))]
     by_record = [[found for one in row for found in one.findings] for row in rows]
     points = [
@@ -224,7 +229,10 @@ def _with_margins(points: Sequence[Point]) -> tuple[Point, ...]:
 def run_task(task: Task) -> TaskResult:
     """In a worker: one pass over the record, all settings of the task side by side."""
     with RecordReader(task.path) as reader:
-        candidates = [_Candidate(reader, setting, task) for setting in task.settings]
+        try:
+            candidates = [_Candidate(reader, setting, task) for setting in task.settings]
+        except ConfigError as error:
+            return TaskResult(refused=(error.source, error.problems))
         acted_after = None
         for recorded, state, carry, anew in played(reader):
             for candidate in candidates:

@@ -1,9 +1,19 @@
 """Sweeps: what every setting of a guard would have said of recorded trials."""
 
+import json
+import sqlite3
+import sys
+import tomllib
 from concurrent.futures import ThreadPoolExecutor
+from xml.etree import ElementTree
 
+import click
 import pytest
+from click.testing import CliRunner
 
+from trialrunner.cli.replay import command
+from trialrunner.config import ConfigError, load_text
+from trialrunner.exit_codes import ExitCode
 from trialrunner.record import RecordReader
 from trialrunner.replay import Replay, ReplayError
 from trialrunner.sweep import Axis, Task, played, run_task, sweep
@@ -117,3 +127,92 @@ def test_axes_are_read(text, values):
 def test_what_cannot_be_swept_is_refused_in_words(text):
     with pytest.raises(ReplayError, match="--sweep"):
         Axis.parse(text)
+
+
+def run_cli(*arguments):
+    result = CliRunner().invoke(command, [str(one) for one in arguments], standalone_mode=False)
+    assert result.exception is None, result.exception
+    return result.return_value, result.output
+
+
+def test_the_command_writes_a_setting_that_loads_and_a_picture(faulty, healthy, tmp_path):
+    """In real worker processes, started afresh."""
+    toml, picture = tmp_path / "guards.toml", tmp_path / "trade.svg"
+    code, output = run_cli(
+        faulty, healthy, "--sweep", "guards.error_growth.jump_ratio=1.5,3,50", "--json",
+        "--fault-at", f"{faulty.name}=8", "--write", toml, "-o", picture, "--jobs", 2,
+    )  # fmt: skip
+    assert code == ExitCode.OK
+    best = json.loads(output)["recommended"]
+    key, _, value = best["set"][0].partition("=")
+    fragment = tomllib.loads(toml.read_text())
+    assert fragment["guards"]["error_growth"][key.split(".")[-1]] == float(value)
+    with RecordReader(healthy) as reader:
+        overrides = [f"{key}={fragment['guards']['error_growth']['jump_ratio']}"]
+        load_text(reader.facts.config_text, overrides)
+    drawn = ElementTree.parse(picture).getroot()
+    assert len(drawn.findall("{http://www.w3.org/2000/svg}circle")) == 3
+
+
+def test_settings_that_all_raise_false_alarms_are_not_recommended(faulty, tmp_path):
+    """Every healthy-looking trial counts as false if the fault is said to begin after the end."""
+    toml = tmp_path / "guards.toml"
+    code, output = run_cli(
+        faulty, "--sweep", "guards.error_growth.jump_ratio=1.5,1.6", "--write", toml, "--jobs", 1
+    )
+    assert code == ExitCode.DIFFERENT
+    assert "none is recommended" in " ".join(output.split())
+    assert not toml.exists()
+
+
+@pytest.mark.parametrize(
+    ("arguments", "said"),
+    [
+        (["--sweep", "law.proportional=1,2"], "only guards"),
+        (["--sweep", "guards.cusum.x=1:2:3", "--set", "a=1"], "do not go with"),
+        (["--sweep", "guards.cusum.x=1:2:3", "--fault-at", "other=3"], "none of the records"),
+        (["--jobs", "2"], "belong to --sweep"),
+    ],
+)
+def test_a_wrong_command_line_is_refused_in_words(tmp_path, arguments, said):
+    result = CliRunner().invoke(
+        command, [str(tmp_path / "a.trialrecord"), *arguments], standalone_mode=False
+    )
+    assert isinstance(result.exception, click.UsageError)
+    assert said in str(result.exception)
+
+
+def test_several_records_are_told_in_a_line_each_and_the_worst_counts(faulty, healthy, tmp_path):
+    code, output = run_cli(faulty, healthy)
+    assert code == ExitCode.OK
+    assert output.count("reproduced, bit for bit") == len(output.splitlines()) == 2
+    with sqlite3.connect(healthy) as db:
+        db.execute("UPDATE trials SET norm = norm * 1.0000001 WHERE trial = 1")
+    db.close()
+    code, output = run_cli(faulty, healthy)
+    assert code == ExitCode.DIFFERENT
+    assert "trial 1: error norm" in output.splitlines()[1]
+    code, output = run_cli(tmp_path / "none.trialrecord", healthy, "--json")
+    assert code == ExitCode.RECORD
+    lines = [json.loads(line) for line in output.splitlines()]
+    assert [line["exit_code"] for line in lines] == [ExitCode.RECORD, ExitCode.DIFFERENT]
+
+
+def test_a_setting_that_cannot_be_is_named_although_a_worker_found_it(healthy):
+    result = CliRunner().invoke(
+        command,
+        [str(healthy), "--sweep", "guards.error_growth.ratio=0.5,2", "--jobs", "1"],
+        standalone_mode=False,
+    )
+    assert isinstance(result.exception, ConfigError)
+    assert "guards.error_growth.ratio" in str(result.exception)
+
+
+def test_dask_is_asked_for_in_words_where_it_is_missing(healthy, monkeypatch):
+    monkeypatch.setitem(sys.modules, "distributed", None)
+    result = CliRunner().invoke(
+        command,
+        [str(healthy), "--sweep", "guards.error_growth.ratio=1.5,2", "--dask", "tcp://a:1"],
+        standalone_mode=False,
+    )
+    assert "Dask is not installed" in str(result.exception)

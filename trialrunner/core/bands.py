@@ -30,7 +30,9 @@ def band_levels(signal: Array, scales: Array, period_s: float) -> Array:
     from scipy.fft import dct  # 0.4 s to import
 
     n_samples = len(signal)
-    power = np.square(dct(signal / scales, axis=0, norm="ortho")).mean(axis=1) / n_samples
+    # One channel a row: sums along a short last axis are ten times slower.
+    rows = dct(np.ascontiguousarray(signal.T) / scales[:, None], axis=1, norm="ortho")
+    power = np.square(rows).mean(axis=0) / n_samples
     edges = octave_edges_hz(n_samples, period_s)
     firsts = np.searchsorted(cosine_frequencies_hz(n_samples, period_s), edges[:-1])
     return np.asarray(np.sqrt(np.add.reduceat(power, firsts)))

@@ -15,7 +15,8 @@ def error_norm(error: Array, scales: Array) -> float:
     as 1. Without unit; NaN if any sample is missing, infinity if the square overflows.
     """
     with np.errstate(over="ignore"):
-        return float(np.sqrt(np.mean(np.square(error / scales))))
+        rows = np.ascontiguousarray(error.T) / scales[:, None]
+        return float(np.sqrt(np.mean(np.square(rows, out=rows))))
 
 
 def error_peak(error: Array, scales: Array) -> float:

@@ -3,6 +3,7 @@
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from enum import IntEnum, StrEnum
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -57,10 +58,15 @@ class Trial:
     asked_again: int = 0
     """Samples that had to be asked for again."""
 
-    @property
+    @cached_property
     def error(self) -> Array:
-        """r - y, (n_samples, n_outputs)."""
+        """r - y, (n_samples, n_outputs); computed once, because every guard asks for it."""
         return self.reference - self.output
+
+    @cached_property
+    def output_rows(self) -> Array:
+        """(n_outputs, n_samples): the output, one channel a row, for what goes along time."""
+        return np.ascontiguousarray(self.output.T)
 
 
 class Level(IntEnum):

@@ -164,7 +164,7 @@ class Health:
         if self.quantisation <= 0.0:
             return
         for j, channel in enumerate(context.outputs):
-            step = resolution(trial.output[:, j])
+            step = resolution(trial.output_rows[j])
             size = float(np.sqrt(np.mean(np.square(trial.error[:, j]))))
             ratio = step / size if size > 0.0 else 0.0
             reason = (
@@ -185,7 +185,7 @@ def _fingerprint(array: Array) -> int:
 def _response(trial: Trial, memory: Memory) -> dict[str, float | int | str | list[float]]:
     """Size (standard deviation) of each output when this feedforward was first played, and now."""
     played = _fingerprint(trial.feedforward)
-    size = np.std(trial.output, axis=0).tolist()
+    size = np.std(trial.output_rows, axis=1).tolist()
     first = memory.get("first size")
     same = memory.get("played") == played and isinstance(first, list) and len(first) == len(size)
     return {"played": played, "first size": first if same and first else size, "last size": size}

@@ -52,7 +52,7 @@ class Integrity:
     def _unbelievable(self, trial: Trial, outputs: tuple[OutputChannel, ...]) -> Iterator[Finding]:
         """The readings of a whole trial that cannot be true."""
         for j, channel in enumerate(outputs):
-            y = np.ascontiguousarray(trial.output[:, j])
+            y = trial.output_rows[j]
             yield from _out_of_range(y, channel)
             yield from self._spike(y, channel)
             yield from self._stuck(trial, j, channel)
@@ -77,7 +77,7 @@ class Integrity:
 
     def _stuck(self, trial: Trial, j: int, channel: OutputChannel) -> Iterator[Finding]:
         reference = np.ascontiguousarray(trial.reference[:, j])
-        output = np.ascontiguousarray(trial.output[:, j])
+        output = trial.output_rows[j]
         found = find_stuck(output, reference, self.stuck_share, self.stuck_samples)
         # A rig without a loop of its own may well stand still when nothing is fed forward.
         if found is None or (found.whole and not trial.feedforward.any()):
@@ -109,7 +109,7 @@ class Integrity:
 
 
 def _motionless(trial: Trial, j: int) -> bool:
-    still = np.ptp(trial.output[:, j]) == 0.0 and np.ptp(trial.reference[:, j]) > 0.0
+    still = np.ptp(trial.output_rows[j]) == 0.0 and np.ptp(trial.reference[:, j]) > 0.0
     return bool(still) and not trial.feedforward.any()
 
 

@@ -3,8 +3,6 @@
 from collections.abc import Callable
 from dataclasses import dataclass
 
-from drivers.tables import table_crc
-
 from drivers.messages import (
     Credit,
     Message,
@@ -15,6 +13,7 @@ from drivers.messages import (
     TableOpen,
     TableState,
 )
+from drivers.tables import table_crc
 from trialrunner.conversation.commander import Commander
 
 

@@ -4,7 +4,7 @@ A body is a MessagePack array: the type number, then the fields in the order dec
 `encode` and `decode` are the only way in and out.
 """
 
-from dataclasses import astuple, dataclass, fields
+from dataclasses import dataclass, fields
 from enum import IntEnum
 from typing import Annotated, Any, ClassVar, get_args, get_type_hints
 
@@ -466,8 +466,3 @@ def _unpack(body: bytes) -> list[Any]:
     if type(values) is not list:
         raise WireError("packing", f"expected an array, found {type(values).__name__}")
     return values
-
-
-def as_tuple(message: Message) -> tuple[Any, ...]:
-    """Type number and fields, for logs and vectors."""
-    return (type(message).TYPE, *astuple(message))

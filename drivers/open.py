@@ -19,14 +19,19 @@ _KINDS = {
 """Module and class of each scheme. To add a link: a file with a Link, and a row here."""
 
 
+def schemes(role: str) -> tuple[str, ...]:
+    """What a URL may begin with at that end; a pseudo-terminal is made by the rig alone."""
+    return tuple(kind for kind in _KINDS if role == RIG or kind != "pty")
+
+
 def open_link(url: str, role: str = DAEMON, clock: Callable[[], float] = time.monotonic) -> Link:
     """Open a link as the daemon or as the rig. Raises LinkError (LinkBusy if somebody has it)."""
     try:
         scheme = urlsplit(url).scheme
     except ValueError as error:
         raise LinkError(f"{url}: no address can be read from this: {error}") from None
-    if scheme not in _KINDS or (role == DAEMON and scheme == "pty"):
-        known = ", ".join(f"{kind}://" for kind in _KINDS if role == RIG or kind != "pty")
+    if scheme not in schemes(role):
+        known = ", ".join(f"{kind}://" for kind in schemes(role))
         raise LinkError(f"{url}: no kind of link that a {role} opens; expected one of {known}")
     module, name = _KINDS[scheme]
     kind = getattr(importlib.import_module(module), name)

@@ -32,15 +32,6 @@ def make_advancer(
     `auxiliary` names the rig's auxiliary channels in its order. Raises SettingError.
     """
     settings = replace(settings_in_force(settings, limits), auxiliary=auxiliary)
-    context = LawContext(
-        period_s=settings.horizon.period_s,
-        n_samples=settings.horizon.n_samples,
-        n_inputs=len(settings.inputs),
-        n_outputs=len(settings.outputs),
-        reference=reference,
-        low=limits.low,
-        high=limits.high,
-        rate_per_s=limits.rate_per_s,
-        plant=build_plant(settings.model, settings.horizon.period_s),
-    )
+    plant = build_plant(settings.model, settings.horizon.period_s)
+    context = LawContext.of(settings, reference, plant)
     return Advancer(settings, context, sample_type)

@@ -13,9 +13,10 @@ from trialrunner.operator_messages import OperatorRequest
 from trialrunner.operator_socket import OperatorSocket
 from trialrunner.session import Session
 from trialrunner.telemetry import Publisher
+from trialrunner.timers import SECOND_NS
 
-LONGEST_WAIT_NS = 1_000_000_000
-STATUS_EVERY_NS = 1_000_000_000
+LONGEST_WAIT_NS = SECOND_NS
+STATUS_EVERY_NS = SECOND_NS
 
 
 class Waker:

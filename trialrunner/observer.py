@@ -95,9 +95,6 @@ class Observer:
         self.status["rig"]["fault"] = ""
         self._take_state(state)
 
-    def armed(self, trial: int) -> None:
-        self._log("debug", "armed", trial=trial)
-
     def rig(self, state: str) -> None:
         self.status["rig"]["state"] = state
 

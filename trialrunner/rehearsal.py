@@ -13,6 +13,7 @@ from collections.abc import Iterator
 from dataclasses import asdict, dataclass
 from datetime import UTC, datetime
 from pathlib import Path
+from statistics import median_high
 from typing import Any
 
 import zmq
@@ -239,7 +240,7 @@ def summarise(reader: RecordReader, plant: str, link: str, daemon_exit: int) -> 
             if verdict.level > Level.PASS or verdict.void:
                 key = f"{verdict.guard}: {'void' if verdict.void else verdict.level.word}"
                 verdicts[key] = verdicts.get(key, 0) + 1
-    last = _median(floor_norms)
+    last = median_high(floor_norms) if floor_norms else None
     floor = _finite(state.floor_norm)
     first, best = _finite(state.first_norm), _finite(state.best_norm)
     return Summary(
@@ -265,11 +266,6 @@ def summarise(reader: RecordReader, plant: str, link: str, daemon_exit: int) -> 
 def _fresh_record(name: str) -> str:
     stamp = datetime.now(UTC).strftime("%Y%m%dT%H%M%S")
     return f"{name}-rehearsal-{stamp}-{os.getpid()}.trialrecord"
-
-
-def _median(values: list[float]) -> float | None:
-    ordered = sorted(values)
-    return ordered[len(ordered) // 2] if ordered else None
 
 
 def _finite(value: float) -> float | None:

@@ -1,6 +1,7 @@
 """Wire to core: greeting to what the law may know, collected samples to a Trial. Pure."""
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
@@ -32,11 +33,16 @@ class Intake:
         data = np.ascontiguousarray(values, dtype=self.dtype).tobytes()
         return TableData.of(name, data, *values.shape)
 
+    @cached_property
+    def _reference_table(self) -> TableData:
+        """The same for every trial."""
+        return self.to_table(Table.REFERENCE, self.reference)
+
     def tables(self, feedforward: Array) -> list[TableData]:
         """Feedforward, and the reference where the daemon owns it."""
         tables = [self.to_table(Table.FEEDFORWARD, feedforward)]
         if self.greeted.greeting.reference_owner == "daemon":
-            tables.append(self.to_table(Table.REFERENCE, self.reference))
+            tables.append(self._reference_table)
         return tables
 
     def trial(

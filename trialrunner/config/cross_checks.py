@@ -3,10 +3,9 @@
 import math
 from collections.abc import Iterable, Iterator, Sequence
 
-import numpy as np
-
 from drivers.errors import LinkError
 from drivers.limits import MAX_SAMPLES, MAX_TEXT_BYTES, MAX_UNIT_BYTES
+from drivers.open import DAEMON, schemes
 from trialrunner.channel_file import ChannelFileError
 from trialrunner.config.lines import Path as KeyPath
 from trialrunner.config.model import Config
@@ -18,9 +17,6 @@ from trialrunner.core.plant_model import build_plant
 from trialrunner.core.settings import InputChannel, OutputChannel
 from trialrunner.core.trial import Array
 from trialrunner.reference import ProfileReference
-
-LINK_SCHEMES = ("serial", "zmq+tcp", "zmq+ipc")
-"""Links that a daemon opens; `drivers.open` knows more, which only a rig's end uses."""
 
 
 def fit_problems(config: Config) -> list[Problem]:
@@ -111,8 +107,8 @@ def _count_problem(path: KeyPath, expected: int, found: int) -> Problem:
 
 def _address_problems(config: Config) -> Iterator[Problem]:
     scheme, mark, _ = config.link.url.partition("://")
-    if not mark or scheme not in LINK_SCHEMES:
-        known = ", ".join(f"{one}://" for one in LINK_SCHEMES)
+    if not mark or scheme not in schemes(DAEMON):
+        known = ", ".join(f"{one}://" for one in schemes(DAEMON))
         yield Problem(("link", "url"), f"expected one of {known}, found {config.link.url!r}")
     elif scheme == "serial":
         yield from _serial_problems(config.link.url)
@@ -191,19 +187,8 @@ def _law_problems(config: Config, reference: Array) -> list[Problem]:
         plant = build_plant(config.model, config.trial.period_s)
     except CoreError as error:
         return [_core_problem(error, ("model",))]
-    context = LawContext(
-        period_s=config.trial.period_s,
-        n_samples=config.trial.n_samples,
-        n_inputs=len(config.inputs),
-        n_outputs=len(config.outputs),
-        reference=reference,
-        low=np.array([one.low for one in config.inputs]),
-        high=np.array([one.high for one in config.inputs]),
-        rate_per_s=np.array([one.rate_limit_per_s for one in config.inputs]),
-        plant=plant,
-    )
     try:
-        config.law.build(context)
+        config.law.build(LawContext.of(config.run_settings(), reference, plant))
     except CoreError as error:
         return [_core_problem(error, ("law",))]
     return []

@@ -20,15 +20,12 @@ class Collector:
         self._row_bytes = n_channels * self._dtype.itemsize
         self.finished: Finished | None = None
         self.asked_again = 0
-        self.rejected = 0
-        """Blocks that do not lie inside the trial; they are dropped."""
 
     def take(self, block: Samples) -> tuple[int, int] | None:
         """Store a block; the span of it that is new, or None."""
         count, rest = divmod(len(block.data), self._row_bytes)
         end = block.first + count
         if block.trial != self.trial or rest or count == 0 or end > self._n_samples:
-            self.rejected += 1
             return None
         if self._here[block.first : end].all():
             return None

@@ -25,8 +25,6 @@ class Commander:
         self._number = FIRST_NUMBER - 1
         self._tries = 0
         self._again_ns = 0
-        self.repeats = 0
-        """Messages sent again for want of an answer, over all sessions."""
 
     def restart(self) -> None:
         """A new session: the next message is number 1."""
@@ -42,10 +40,6 @@ class Commander:
         self._queue.clear()
         if self._under_way is not None:
             self._under_way = (self._under_way[0], _ignore)
-
-    @property
-    def idle(self) -> bool:
-        return self._under_way is None and not self._queue
 
     def exhausted(self, now_ns: int) -> bool:
         """The message under way was sent max_tries times and the last time went unanswered too."""
@@ -66,7 +60,6 @@ class Commander:
             self._tries = 0
         elif now_ns < self._again_ns:
             return None
-        self.repeats += self._tries > 0
         self._tries += 1
         self._again_ns = now_ns + self._timeout_ns
         return self._under_way[0], self._number

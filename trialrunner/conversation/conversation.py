@@ -49,8 +49,8 @@ from trialrunner.conversation.table_sender import TableData
 from trialrunner.conversation.timing import LinkTiming
 from trialrunner.conversation.trial_talk import TrialTalk
 from trialrunner.core.clock_sync import ClockSync
+from trialrunner.timers import SECOND_NS
 
-SECOND_NS = 1_000_000_000
 HARMLESS = frozenset({"session", "before greeting", "stale answer", "stale pong", "stale samples"})
 """Kinds of frames that any restart or repeated message brings with it."""
 

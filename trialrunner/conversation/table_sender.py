@@ -63,7 +63,6 @@ class TableSender:
         self._round = 0
         self._last_credit = (-1, -1)
         self._announced = False
-        self.blocks_repeated = 0
 
     def send(self, table: TableData, capacity: int) -> None:
         """Announce a table; it is streamed where it is longer than the rig's memory."""
@@ -113,7 +112,6 @@ class TableSender:
         if credit.have < self._next and (credit.have, credit.upto) == self._last_credit:
             # The same report twice while blocks are out: one was lost; go back to the gap.
             self._next = credit.have
-            self.blocks_repeated += 1
             self._last_credit = (-1, -1)
         else:
             self._last_credit = (credit.have, credit.upto)
@@ -158,7 +156,6 @@ class TableSender:
             return
         whole = ((0, self._table.n_samples),)
         missing = state.missing if self._round and state.missing else whole
-        self.blocks_repeated += len(missing) if self._round else 0
         self._spans = [s for s in reversed(missing) if s[0] + s[1] <= self._table.n_samples]
         self._round += 1
         self._closing = True

@@ -81,12 +81,12 @@ class RunState:
 
     def to_json(self) -> dict[str, Any]:
         """JSON-ready; NaN and infinities as strings, because JSON has none."""
-        return {f.name: _plain(getattr(self, f.name)) for f in fields(self)}
+        return {f.name: to_plain(getattr(self, f.name)) for f in fields(self)}
 
     @classmethod
     def from_json(cls, values: Mapping[str, Any]) -> "RunState":
         known = {f.name for f in fields(cls)}
-        read = {key: _read(value) for key, value in values.items() if key in known}
+        read = {key: from_plain(value) for key, value in values.items() if key in known}
         read["purpose"] = Purpose(read["purpose"])
         for key in ("recent_norms", "recent_trials"):
             read[key] = tuple(read.get(key, ()))
@@ -98,7 +98,8 @@ _TEXT = "text:"
 """Stands before a text that would read as one of the other two."""
 
 
-def _plain(value: Any) -> Any:
+def to_plain(value: Any) -> Any:
+    """A value as JSON has it: NaN and infinities as texts, tuples as lists."""
     if isinstance(value, int):
         return value
     if isinstance(value, float):
@@ -106,21 +107,22 @@ def _plain(value: Any) -> Any:
     if isinstance(value, str) and (value in _ODD or value.startswith(_TEXT)):
         return _TEXT + value
     if isinstance(value, Mapping):
-        return {key: _plain(item) for key, item in value.items()}
+        return {key: to_plain(item) for key, item in value.items()}
     if isinstance(value, list | tuple):
-        return [_plain(item) for item in value]
+        return [to_plain(item) for item in value]
     return value
 
 
-def _read(value: Any) -> Any:
+def from_plain(value: Any) -> Any:
+    """The inverse of `to_plain`, but for tuples."""
     if isinstance(value, int | float):
         return value
     if isinstance(value, str):
         return _ODD.get(value, value.removeprefix(_TEXT))
     if isinstance(value, dict):
-        return {key: _read(item) for key, item in value.items()}
+        return {key: from_plain(item) for key, item in value.items()}
     if isinstance(value, list):
-        return [_read(item) for item in value]
+        return [from_plain(item) for item in value]
     return value
 
 

@@ -11,7 +11,7 @@ import scipy
 from drivers.messages import Channel
 from trialrunner.agreement import LimitsInForce
 from trialrunner.conversation.events import Greeted
-from trialrunner.core.run_state import _plain, _read
+from trialrunner.core.run_state import from_plain, to_plain
 
 
 @dataclass(frozen=True)
@@ -74,12 +74,12 @@ class RunFacts:
     def to_rows(self) -> dict[str, str]:
         """Key and JSON text of each fact; infinities as text, because JSON has none."""
         return {
-            key: json.dumps(_plain(value), allow_nan=False) for key, value in vars(self).items()
+            key: json.dumps(to_plain(value), allow_nan=False) for key, value in vars(self).items()
         }
 
     @classmethod
     def from_rows(cls, rows: dict[str, str]) -> "RunFacts":
-        return cls(**{key: _read(json.loads(text)) for key, text in rows.items()})
+        return cls(**{key: from_plain(json.loads(text)) for key, text in rows.items()})
 
 
 def _limit_lists(limits: LimitsInForce) -> dict[str, list[float]]:

@@ -2,6 +2,7 @@
 
 import math
 from collections.abc import Sequence
+from functools import lru_cache
 from statistics import median
 
 from trialrunner.core.charts import Level, robust_level
@@ -23,7 +24,12 @@ HIGHEST_SCORE = 4.0
 
 def level_before(context: GuardContext, warm_up: int, least_spread: float) -> Level | None:
     """Level of ln(error norm) before this trial; None while too few trials were seen."""
-    norms = context.recent_norms[-WINDOW_TRIALS:]
+    return _level(context.recent_norms[-WINDOW_TRIALS:], warm_up, least_spread)
+
+
+@lru_cache(maxsize=8)
+def _level(norms: tuple[float, ...], warm_up: int, least_spread: float) -> Level | None:
+    """Remembered, because each chart asks for the same one."""
     logs = [math.log(norm) for norm in norms if norm > 0.0]
     if len(logs) < warm_up:
         return None

@@ -1,14 +1,17 @@
-"""Learning laws: one file each behind one contract, listed in LAWS.
+"""Learning laws: one file each behind one contract, listed in `law_table`.
 
-To add a law: a settings dataclass with `kind` and `build`, a class with `update`, a row in LAWS.
+To add a law: a settings dataclass with `kind` and `build`, a class with `update`, and a row there.
 """
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import Any, Protocol
 
+import numpy as np
+
 from trialrunner.core.errors import SettingError
 from trialrunner.core.plant_model import PlantModel
+from trialrunner.core.settings import RunSettings
 from trialrunner.core.trial import Array, Memory, Purpose, Trial
 
 
@@ -30,6 +33,22 @@ class LawContext:
     """(n_inputs,): rate limit; infinity where there is none."""
     plant: PlantModel | None = None
     """From the table [model]; None if there is none."""
+
+    @classmethod
+    def of(cls, settings: RunSettings, reference: Array, plant: PlantModel | None) -> "LawContext":
+        """What the settings say; the limits are those of their inputs."""
+        inputs = settings.inputs
+        return cls(
+            period_s=settings.horizon.period_s,
+            n_samples=settings.horizon.n_samples,
+            n_inputs=len(inputs),
+            n_outputs=len(settings.outputs),
+            reference=reference,
+            low=np.array([channel.low for channel in inputs]),
+            high=np.array([channel.high for channel in inputs]),
+            rate_per_s=np.array([channel.rate_limit_per_s for channel in inputs]),
+            plant=plant,
+        )
 
 
 @dataclass(frozen=True)

@@ -4,19 +4,13 @@ from dataclasses import dataclass
 from typing import Any, ClassVar
 
 from trialrunner.core.bounds import STRICT, MemoryWeight, NonNegative, Positive, PositiveCount
-from trialrunner.core.charts import (
-    ewma_sigma,
-    ewma_step_up,
-    ewma_up_limit,
-    per_chart,
-)
-from trialrunner.core.guards import Action, GuardContext, Report
-from trialrunner.core.guards.norm_charts import comparison, judged, level_before, number, score_of
-from trialrunner.core.trial import GuardResult, Memory, Trial
+from trialrunner.core.charts import ewma_sigma, ewma_step_up, ewma_up_limit
+from trialrunner.core.guards import Action
+from trialrunner.core.guards.norm_charts import NormChart
 
 
 @dataclass(frozen=True, kw_only=True)
-class Ewma:
+class Ewma(NormChart):
     """Fires when the weighted mean of the last trials' error norms lies too far above the level.
 
     The weighted mean (Roberts 1959) of ln(norm) in units of its scatter, held at zero from below,
@@ -26,6 +20,7 @@ class Ewma:
     __pydantic_config__: ClassVar[dict[str, Any]] = STRICT
     NAME: ClassVar[str] = "ewma"
     CHARTS: ClassVar[int] = 1
+    KEPT: ClassVar[str] = "mean"
 
     enabled: bool = True
     action: Action = "warn"
@@ -38,22 +33,14 @@ class Ewma:
     least_spread: NonNegative = 0.05
     """Scatter of ln(norm) below which a measured scatter is not believed; 0.05 is about 5 %."""
 
-    def judge(self, trial: Trial, context: GuardContext, memory: Memory) -> GuardResult:
-        level = level_before(context, self.warm_up_trials, self.least_spread)
-        if level is None or not judged(trial):
-            return self._report(0.0, -1).passed()
-        before, first = number(memory, "mean", 0.0), int(number(memory, "first", -1))
-        mean = ewma_step_up(before, score_of(context, level), self.weight)
-        first = trial.index if before == 0.0 else first
-        width = ewma_up_limit(self.weight, per_chart(self.false_alarm_trials, context.n_charts))
-        limit = width * ewma_sigma(self.weight)
-        if mean <= limit:
-            return self._report(mean, first).passed()
-        reason = (
-            f"{comparison(context, level, first, trial.index)}; their weighted mean lies "
-            f"{mean:.3g} standard deviations above it, the limit is {limit:.4g}"
-        )
-        return self._report(0.0, -1).fired(self.action, reason, mean, limit)
+    def add(self, before: float, score: float) -> float:
+        return ewma_step_up(before, score, self.weight)
 
-    def _report(self, mean: float, first: int) -> Report:
-        return Report(self.NAME, {"mean": mean, "first": first if mean > 0.0 else -1})
+    def limit(self, run_length: float) -> float:
+        return ewma_up_limit(self.weight, run_length) * ewma_sigma(self.weight)
+
+    def words(self, total: float, limit: float) -> str:
+        return (
+            f"their weighted mean lies {total:.3g} standard deviations above it, "
+            f"the limit is {limit:.4g}"
+        )

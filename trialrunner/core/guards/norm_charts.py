@@ -4,11 +4,12 @@ import math
 from collections.abc import Sequence
 from functools import lru_cache
 from statistics import median
+from typing import ClassVar
 
-from trialrunner.core.charts import Level, robust_level
-from trialrunner.core.guards import GuardContext
+from trialrunner.core.charts import Level, per_chart, robust_level
+from trialrunner.core.guards import Action, GuardContext, Report
 from trialrunner.core.scatter import MAD_TO_SIGMA
-from trialrunner.core.trial import Memory, Purpose, Trial
+from trialrunner.core.trial import GuardResult, Memory, Purpose, Trial
 
 WINDOW_TRIALS = 48
 """Trials that the level is taken from. A rig's slow drift moves the level with it; growth by more
@@ -53,12 +54,53 @@ def score_of(context: GuardContext, level: Level) -> float:
     return min(level.score(math.log(context.error_norm)), HIGHEST_SCORE)
 
 
-def judged(trial: Trial) -> bool:
-    """Only what follows from the last update is compared, frozen or not."""
-    return trial.purpose is Purpose.LEARN
+class NormChart:
+    """What a chart of growth on ln(norm) asks and remembers; a child adds its sum and its limit.
+
+    The settings stand in the child, each with its description: those of a base would be lost.
+    """
+
+    NAME: ClassVar[str]
+    KEPT: ClassVar[str]
+    """Name of the child's sum in its memory."""
+
+    action: Action
+    false_alarm_trials: float
+    warm_up_trials: int
+    least_spread: float
+
+    def add(self, before: float, score: float) -> float:
+        """The sum with one more trial's score; never below zero."""
+        raise NotImplementedError
+
+    def limit(self, run_length: float) -> float:
+        """What the sum may reach, for this mean number of trials between false alarms."""
+        raise NotImplementedError
+
+    def words(self, total: float, limit: float) -> str:
+        """How the sum stands to its limit."""
+        raise NotImplementedError
+
+    def judge(self, trial: Trial, context: GuardContext, memory: Memory) -> GuardResult:
+        level = level_before(context, self.warm_up_trials, self.least_spread)
+        if level is None or trial.purpose is not Purpose.LEARN:
+            # Only what follows from the last update is compared, frozen or not.
+            return self._report(0.0, -1).passed()
+        before, first = _number(memory, self.KEPT, 0.0), int(_number(memory, "first", -1))
+        total = self.add(before, score_of(context, level))
+        first = trial.index if before == 0.0 else first
+        limit = self.limit(per_chart(self.false_alarm_trials, context.n_charts))
+        if total <= limit:
+            return self._report(total, first).passed()
+        compared = comparison(context, level, first, trial.index)
+        reason = f"{compared}; {self.words(total, limit)}"
+        return self._report(0.0, -1).fired(self.action, reason, total, limit)
+
+    def _report(self, total: float, first: int) -> Report:
+        return Report(self.NAME, {self.KEPT: total, "first": first if total > 0.0 else -1})
 
 
-def number(memory: Memory, key: str, default: float) -> float:
+def _number(memory: Memory, key: str, default: float) -> float:
     value = memory.get(key, default)
     return default if isinstance(value, str | list) else float(value)
 
